@@ -1,0 +1,297 @@
+"""Kinematics of a planar hand: joint values to link centre lines, Jacobians, and back.
+
+Joint values of a hand are one vector (n_joints,), fingers as the profile lists them, each from its base outward: revolute
+[rad], prismatic [mm]. Walking out from the base, a revolute joint turns the direction and adds its link; a prismatic joint
+adds a link as long as its value (the product of planar rigid motions; Lynch & Park, Modern Robotics, ch. 4, in the plane).
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable
+from dataclasses import dataclass
+from functools import cached_property
+from typing import Any
+
+import numpy as np
+from numba import njit
+from numpy.typing import ArrayLike, NDArray
+
+from hw_profiles.geometry import Array
+from hw_profiles.hand import Hand, Servo
+
+MAX_LINKS = 3
+ARM_MM = 40.0  # weighs a jaw's direction error [rad] against its position error [mm]
+
+
+def _frozen(values: ArrayLike, kind: type = float) -> Any:
+    array = np.array(values, dtype=kind)
+    array.setflags(write=False)
+    return array
+
+
+@dataclass(frozen=True, eq=False)
+class HandModel:
+    """A hand profile as read-only arrays, ready for kernels.
+
+    Attributes
+    ----------
+    base_mm (n_fingers, 2), base_yaw_rad (n_fingers,) : where fingers stand and look.
+    first (n_fingers + 1,) : finger f owns joints first[f]:first[f + 1]; each joint carries one link.
+    is_slide, link_mm, link_radius_mm (n_joints,) : link_mm is 0 where the joint slides.
+    tip_radius_mm, contact_back_mm, is_jaw (n_fingers,) : how the finger's end touches; a jaw touches with the flat of its
+        last link, contact_back_mm from the end.
+    low, high, home (n_joints,) : [rad] or [mm].
+    stiffness, stall (n_joints,) : [N·mm/rad] and [N·mm], or [N/mm] and [N] where the joint slides.
+    """
+
+    hand: Hand
+
+    @cached_property
+    def _joints(self) -> list[tuple[int, int]]:
+        return [(f, j) for f, finger in enumerate(self.hand.fingers) for j in range(len(self.hand.chain_of(finger).joints))]
+
+    def _per_joint(self, value: Callable[[Any, Servo], float]) -> Any:
+        hand = self.hand
+        joints = [hand.chain_of(hand.fingers[f]).joints[j] for f, j in self._joints]
+        return _frozen([value(joint, hand.servos[joint.servo]) for joint in joints])
+
+    @cached_property
+    def n_fingers(self) -> int:
+        return len(self.hand.fingers)
+
+    @cached_property
+    def n_joints(self) -> int:
+        return len(self._joints)
+
+    @cached_property
+    def base_mm(self) -> Array:
+        return _frozen([(finger.base_x_mm, finger.base_y_mm) for finger in self.hand.fingers])
+
+    @cached_property
+    def base_yaw_rad(self) -> Array:
+        return _frozen([math.radians(finger.base_angle_deg) for finger in self.hand.fingers])
+
+    @cached_property
+    def first(self) -> NDArray[np.int64]:
+        counts = [len(self.hand.chain_of(finger).joints) for finger in self.hand.fingers]
+        return _frozen(np.concatenate([[0], np.cumsum(counts)]), np.int64)
+
+    @cached_property
+    def is_slide(self) -> NDArray[np.bool_]:
+        return _frozen(self._per_joint(lambda joint, _: joint.kind == "prismatic"), np.bool_)
+
+    @cached_property
+    def link_mm(self) -> Array:
+        return self._per_joint(lambda joint, _: joint.link_mm if joint.kind == "revolute" else 0.0)
+
+    @cached_property
+    def link_radius_mm(self) -> Array:
+        return self._per_joint(lambda joint, _: joint.link_radius_mm)
+
+    @cached_property
+    def tip_radius_mm(self) -> Array:
+        return _frozen([self.hand.chain_of(finger).tip_radius_mm for finger in self.hand.fingers])
+
+    @cached_property
+    def is_jaw(self) -> NDArray[np.bool_]:
+        return _frozen([self.hand.chain_of(finger).contact == "jaw" for finger in self.hand.fingers], np.bool_)
+
+    @cached_property
+    def contact_back_mm(self) -> Array:
+        chains = [self.hand.chain_of(finger) for finger in self.hand.fingers]
+        return _frozen([chain.jaw_contact_mm if chain.contact == "jaw" else 0.0 for chain in chains])
+
+    @cached_property
+    def contact_radius_mm(self) -> Array:
+        """From the centre of the contact (tip centre, or a point on a jaw's centre line) to its surface (n_fingers,)."""
+        jaw_radius = self.link_radius_mm[self.first[1:] - 1]
+        return _frozen(np.where(self.is_jaw, jaw_radius, self.tip_radius_mm))
+
+    @cached_property
+    def low(self) -> Array:
+        return self._per_joint(lambda joint, _: joint.low)
+
+    @cached_property
+    def high(self) -> Array:
+        return self._per_joint(lambda joint, _: joint.high)
+
+    @cached_property
+    def home(self) -> Array:
+        return self._per_joint(lambda joint, _: joint.home)
+
+    @cached_property
+    def stiffness(self) -> Array:
+        return self._per_joint(lambda joint, servo: servo.stiffness_nmm_per_rad / joint.per_horn_rad**2)
+
+    @cached_property
+    def stall(self) -> Array:
+        return self._per_joint(lambda joint, servo: servo.stall_torque_nmm / joint.per_horn_rad)
+
+    @cached_property
+    def speed(self) -> Array:
+        """No-load speed (n_joints,) [rad/s] or [mm/s]."""
+        return self._per_joint(lambda joint, servo: math.radians(servo.speed_deg_per_s) * joint.per_horn_rad)
+
+    def joints_of(self, finger: int) -> slice:
+        """Where a finger's joints stand in the hand's joint vector."""
+        return slice(int(self.first[finger]), int(self.first[finger + 1]))
+
+
+def centre_lines(model: HandModel, joints: Array) -> Array:
+    """Link ends of every finger: (n_fingers, 4, 2) [mm], base first; shorter fingers repeat their tip."""
+    lines: Array = _centre_lines(model.base_mm, model.base_yaw_rad, model.first, model.is_slide, model.link_mm, joints)
+    return lines
+
+
+def link_yaws(model: HandModel, joints: Array) -> Array:
+    """Direction of every link (n_joints,) [rad] in the hand frame."""
+    turns = np.where(model.is_slide, 0.0, joints)
+    sums = [np.cumsum(turns[model.joints_of(f)]) + model.base_yaw_rad[f] for f in range(model.n_fingers)]
+    return np.concatenate(sums)
+
+
+def contact_centres(model: HandModel, joints: Array) -> Array:
+    """Centre of each finger's contact (n_fingers, 2) [mm]: its tip, or the contact point on a jaw's centre line."""
+    lines = centre_lines(model, joints)
+    yaws = link_yaws(model, joints)[model.first[1:] - 1]
+    return np.asarray(lines[:, -1] - model.contact_back_mm[:, None] * np.stack([np.cos(yaws), np.sin(yaws)], axis=1))
+
+
+def finger_jacobian(model: HandModel, finger: int, joints: Array, point_mm: Array) -> Array:
+    """d point / d joints (2, n) of a point fixed to the last link of a finger, with the hand's joint vector (n_joints,)."""
+    own = model.joints_of(finger)
+    jacobian = np.empty((2, own.stop - own.start))
+    line, yaws = centre_lines(model, joints)[finger], link_yaws(model, joints)[own]
+    for j in range(own.stop - own.start):
+        if model.is_slide[own.start + j]:
+            jacobian[:, j] = math.cos(yaws[j]), math.sin(yaws[j])
+        else:
+            offset = point_mm - line[j]
+            jacobian[:, j] = -offset[1], offset[0]
+    return jacobian
+
+
+def place_contact(
+    model: HandModel, finger: int, centre_mm: Array, near: Array, jaw_yaw_rad: float | None = None
+) -> tuple[Array, float]:
+    """Joint values of one finger that bring its contact centre to a point (inverse kinematics).
+
+    Parameters
+    ----------
+    centre_mm : (2,) wanted contact centre in the hand frame.
+    near : (n,) where the search starts; with more joints than needed the answer stays near it.
+    jaw_yaw_rad : wanted direction of the last link; None where it does not matter.
+
+    Returns
+    -------
+    joints (n,) within limits, and the distance left [mm] (direction errors weigh 40 mm/rad).
+
+    Notes
+    -----
+    Levenberg–Marquardt with joint limits by projection; about 3 µs.
+    """
+    own = model.joints_of(finger)
+    wanted = math.nan if jaw_yaw_rad is None else jaw_yaw_rad
+    placed, left_mm = _place(
+        model.base_mm[finger],
+        model.base_yaw_rad[finger],
+        model.is_slide[own],
+        model.link_mm[own],
+        model.low[own],
+        model.high[own],
+        model.contact_back_mm[finger],
+        np.asarray(centre_mm, dtype=float),
+        wanted,
+        np.asarray(near, dtype=float),
+    )
+    return placed, float(left_mm)
+
+
+@njit(cache=True)
+def _centre_lines(base_mm, base_yaw_rad, first, is_slide, link_mm, joints):  # type: ignore[no-untyped-def]
+    n_fingers = base_mm.shape[0]
+    lines = np.empty((n_fingers, MAX_LINKS + 1, 2))
+    for f in range(n_fingers):
+        x, y, yaw = base_mm[f, 0], base_mm[f, 1], base_yaw_rad[f]
+        lines[f, 0, 0], lines[f, 0, 1] = x, y
+        n = first[f + 1] - first[f]
+        for j in range(MAX_LINKS):
+            if j < n:
+                k = first[f] + j
+                length = joints[k] if is_slide[k] else link_mm[k]
+                if not is_slide[k]:
+                    yaw += joints[k]
+                x += length * math.cos(yaw)
+                y += length * math.sin(yaw)
+            lines[f, j + 1, 0], lines[f, j + 1, 1] = x, y
+    return lines
+
+
+@njit(cache=True)
+def _residual(base, base_yaw, is_slide, link, back, target, wanted_yaw, q, residual, jacobian):  # type: ignore[no-untyped-def]
+    """Contact error and its Jacobian (row 2: direction, weighed by ARM_MM; 0 where it does not matter)."""
+    n = q.shape[0]
+    x, y, yaw = base[0], base[1], base_yaw
+    joint_x, joint_y, joint_yaw = np.empty(n), np.empty(n), np.empty(n)
+    for j in range(n):
+        joint_x[j], joint_y[j] = x, y
+        if not is_slide[j]:
+            yaw += q[j]
+        joint_yaw[j] = yaw
+        length = q[j] if is_slide[j] else link[j]
+        x += length * math.cos(yaw)
+        y += length * math.sin(yaw)
+    x -= back * math.cos(yaw)
+    y -= back * math.sin(yaw)
+    residual[0], residual[1], residual[2] = x - target[0], y - target[1], 0.0
+    use_yaw = not math.isnan(wanted_yaw)
+    if use_yaw:
+        residual[2] = ARM_MM * (math.pi - (math.pi - (yaw - wanted_yaw)) % (2.0 * math.pi))
+    for j in range(n):
+        if is_slide[j]:
+            jacobian[0, j], jacobian[1, j], jacobian[2, j] = math.cos(joint_yaw[j]), math.sin(joint_yaw[j]), 0.0
+        else:
+            jacobian[0, j], jacobian[1, j] = -(y - joint_y[j]), x - joint_x[j]
+            jacobian[2, j] = ARM_MM if use_yaw else 0.0
+
+
+@njit(cache=True)
+def _place(base, base_yaw, is_slide, link, low, high, back, target, wanted_yaw, near):  # type: ignore[no-untyped-def]
+    n = near.shape[0]
+    q = np.minimum(np.maximum(near, low), high)
+    residual, jacobian = np.empty(3), np.empty((3, n))
+    trial_residual, trial_jacobian = np.empty(3), np.empty((3, n))
+    _residual(base, base_yaw, is_slide, link, back, target, wanted_yaw, q, residual, jacobian)
+    cost = np.dot(residual, residual)
+    damping = 1e-3
+    for _ in range(60):
+        if cost < 1e-16:
+            break
+        gradient = jacobian.T @ residual
+        normal = jacobian.T @ jacobian
+        free = np.ones(n)
+        for j in range(n):  # a joint on its limit that would move beyond it stays there
+            if (q[j] <= low[j] and gradient[j] > 0.0) or (q[j] >= high[j] and gradient[j] < 0.0):
+                free[j] = 0.0
+        for j in range(n):
+            for i in range(n):
+                normal[i, j] *= free[i] * free[j]
+            normal[j, j] += damping * (normal[j, j] + 1e-9) + (1.0 - free[j])
+        step = np.linalg.solve(normal, gradient * free)
+        trial = np.minimum(np.maximum(q - step, low), high)
+        _residual(base, base_yaw, is_slide, link, back, target, wanted_yaw, trial, trial_residual, trial_jacobian)
+        trial_cost = np.dot(trial_residual, trial_residual)
+        if trial_cost < cost:
+            if cost - trial_cost < 1e-14 * (1.0 + cost):
+                q = trial
+                cost = trial_cost
+                break
+            q, cost = trial, trial_cost
+            residual[:], jacobian[:] = trial_residual, trial_jacobian
+            damping = max(damping * 0.2, 1e-12)
+        else:
+            damping *= 8.0
+            if damping > 1e12:
+                break
+    return q, math.sqrt(cost)
