@@ -25,7 +25,7 @@ ARM_MM = 40.0  # weighs a jaw's direction error [rad] against its position error
 
 
 def _frozen(values: ArrayLike, kind: type = float) -> Any:
-    array = np.array(values, dtype=kind)
+    array: Array = np.array(values, dtype=kind)
     array.setflags(write=False)
     return array
 
