@@ -208,6 +208,29 @@ def place_contact(
     return placed, float(left_mm)
 
 
+def place_contacts(model: HandModel, centres_mm: Array, yaws_rad: Array, near: Array) -> tuple[Array, Array]:
+    """Joint values (n_joints,) that bring every contact centre (n_fingers, 2) to its place, and the distances left (n_fingers,).
+
+    `yaws_rad` (n_fingers,) are wanted directions of the last links, nan where they do not matter. See `place_contact`.
+    """
+    left_mm = np.empty(model.n_fingers)
+    joints = place_all(
+        model.base_mm,
+        model.base_yaw_rad,
+        model.first,
+        model.is_slide,
+        model.link_mm,
+        model.low,
+        model.high,
+        model.contact_back_mm,
+        centres_mm,
+        yaws_rad,
+        near,
+        left_mm,
+    )
+    return joints, left_mm
+
+
 @njit(cache=True)
 def _centre_lines(base_mm, base_yaw_rad, first, is_slide, link_mm, joints):  # type: ignore[no-untyped-def]
     n_fingers = base_mm.shape[0]
@@ -229,16 +252,75 @@ def _centre_lines(base_mm, base_yaw_rad, first, is_slide, link_mm, joints):  # t
 
 
 @njit(cache=True)
-def _residual(base, base_yaw, is_slide, link, back, target, wanted_yaw, q, residual, jacobian):  # type: ignore[no-untyped-def]
-    """Contact error and its Jacobian (row 2: direction, weighed by ARM_MM; 0 where it does not matter)."""
+def _place(
+    base: Array,
+    base_yaw: float,
+    is_slide: NDArray[np.bool_],
+    link: Array,
+    low: Array,
+    high: Array,
+    back: float,
+    target: Array,
+    wanted_yaw: float,
+    near: Array,
+) -> tuple[Array, float]:
+    n = near.shape[0]
+    q = np.minimum(np.maximum(near, low), high)
+    residual, jacobian = np.empty(3), np.empty((3, MAX_LINKS))
+    trial, trial_residual, trial_jacobian = np.empty(n), np.empty(3), np.empty((3, MAX_LINKS))
+    gradient, normal, step = np.empty(MAX_LINKS), np.empty((MAX_LINKS, MAX_LINKS)), np.empty(MAX_LINKS)
+    cost = _residual(base, base_yaw, is_slide, link, back, target, wanted_yaw, q, residual, jacobian)
+    damping = 1e-4
+    for _ in range(60):
+        if cost < 1e-12:
+            break
+        _normal_equations(jacobian, residual, n, normal, gradient)
+        for j in range(n):
+            normal[j, j] += damping * (normal[j, j] + 1e-9)
+            if (q[j] <= low[j] and gradient[j] > 0.0) or (q[j] >= high[j] and gradient[j] < 0.0):
+                gradient[j] = 0.0  # a joint on its limit that would move beyond it stays there
+                for i in range(MAX_LINKS):
+                    normal[i, j] = normal[j, i] = 0.0
+                normal[j, j] = 1.0
+        _solve3(normal, gradient, step)
+        for j in range(n):
+            trial[j] = min(max(q[j] - step[j], low[j]), high[j])
+        trial_cost = _residual(base, base_yaw, is_slide, link, back, target, wanted_yaw, trial, trial_residual, trial_jacobian)
+        if trial_cost < cost:
+            gain = cost - trial_cost
+            q[:], residual[:], jacobian[:] = trial, trial_residual, trial_jacobian
+            cost = trial_cost
+            damping = max(damping * 0.1, 1e-12)
+            if gain < 1e-10 * cost:
+                break
+        else:
+            damping = max(damping * 10.0, 1e-6)
+            if damping > 1e10:
+                break
+    return q, math.sqrt(cost)
+
+
+@njit(cache=True)
+def _residual(
+    base: Array,
+    base_yaw: float,
+    is_slide: NDArray[np.bool_],
+    link: Array,
+    back: float,
+    target: Array,
+    wanted_yaw: float,
+    q: Array,
+    residual: Array,
+    jacobian: Array,
+) -> float:
+    """Contact error and its Jacobian (row 2: direction, weighed by ARM_MM; 0 where it does not matter); returns |error|²."""
     n = q.shape[0]
     x, y, yaw = base[0], base[1], base_yaw
-    joint_x, joint_y, joint_yaw = np.empty(n), np.empty(n), np.empty(n)
     for j in range(n):
-        joint_x[j], joint_y[j] = x, y
+        jacobian[0, j], jacobian[1, j] = x, y  # where the joint stands, until the contact is known
         if not is_slide[j]:
             yaw += q[j]
-        joint_yaw[j] = yaw
+        jacobian[2, j] = yaw
         length = q[j] if is_slide[j] else link[j]
         x += length * math.cos(yaw)
         y += length * math.sin(yaw)
@@ -250,48 +332,62 @@ def _residual(base, base_yaw, is_slide, link, back, target, wanted_yaw, q, resid
         residual[2] = ARM_MM * (math.pi - (math.pi - (yaw - wanted_yaw)) % (2.0 * math.pi))
     for j in range(n):
         if is_slide[j]:
-            jacobian[0, j], jacobian[1, j], jacobian[2, j] = math.cos(joint_yaw[j]), math.sin(joint_yaw[j]), 0.0
+            direction = jacobian[2, j]
+            jacobian[0, j], jacobian[1, j], jacobian[2, j] = math.cos(direction), math.sin(direction), 0.0
         else:
-            jacobian[0, j], jacobian[1, j] = -(y - joint_y[j]), x - joint_x[j]
+            jacobian[0, j], jacobian[1, j] = -(y - jacobian[1, j]), x - jacobian[0, j]
             jacobian[2, j] = ARM_MM if use_yaw else 0.0
+    return residual[0] ** 2 + residual[1] ** 2 + residual[2] ** 2
 
 
 @njit(cache=True)
-def _place(base, base_yaw, is_slide, link, low, high, back, target, wanted_yaw, near):  # type: ignore[no-untyped-def]
-    n = near.shape[0]
-    q = np.minimum(np.maximum(near, low), high)
-    residual, jacobian = np.empty(3), np.empty((3, n))
-    trial_residual, trial_jacobian = np.empty(3), np.empty((3, n))
-    _residual(base, base_yaw, is_slide, link, back, target, wanted_yaw, q, residual, jacobian)
-    cost = np.dot(residual, residual)
-    damping = 1e-3
-    for _ in range(60):
-        if cost < 1e-16:
-            break
-        gradient = jacobian.T @ residual
-        normal = jacobian.T @ jacobian
-        free = np.ones(n)
-        for j in range(n):  # a joint on its limit that would move beyond it stays there
-            if (q[j] <= low[j] and gradient[j] > 0.0) or (q[j] >= high[j] and gradient[j] < 0.0):
-                free[j] = 0.0
+def _normal_equations(jacobian: Array, residual: Array, n: int, normal: Array, gradient: Array) -> None:
+    """JᵀJ and Jᵀr, padded to 3 with the identity."""
+    for i in range(MAX_LINKS):
+        gradient[i] = 0.0
+        for j in range(MAX_LINKS):
+            normal[i, j] = 1.0 if i == j else 0.0
+    for i in range(n):
+        gradient[i] = jacobian[0, i] * residual[0] + jacobian[1, i] * residual[1] + jacobian[2, i] * residual[2]
         for j in range(n):
-            for i in range(n):
-                normal[i, j] *= free[i] * free[j]
-            normal[j, j] += damping * (normal[j, j] + 1e-9) + (1.0 - free[j])
-        step = np.linalg.solve(normal, gradient * free)
-        trial = np.minimum(np.maximum(q - step, low), high)
-        _residual(base, base_yaw, is_slide, link, back, target, wanted_yaw, trial, trial_residual, trial_jacobian)
-        trial_cost = np.dot(trial_residual, trial_residual)
-        if trial_cost < cost:
-            if cost - trial_cost < 1e-14 * (1.0 + cost):
-                q = trial
-                cost = trial_cost
-                break
-            q, cost = trial, trial_cost
-            residual[:], jacobian[:] = trial_residual, trial_jacobian
-            damping = max(damping * 0.2, 1e-12)
-        else:
-            damping *= 8.0
-            if damping > 1e12:
-                break
-    return q, math.sqrt(cost)
+            normal[i, j] = jacobian[0, i] * jacobian[0, j] + jacobian[1, i] * jacobian[1, j] + jacobian[2, i] * jacobian[2, j]
+
+
+@njit(cache=True)
+def _solve3(a: Array, b: Array, x: Array) -> None:
+    """a x = b for a symmetric positive definite (3, 3), by cofactors."""
+    c00 = a[1, 1] * a[2, 2] - a[1, 2] * a[2, 1]
+    c01 = a[0, 2] * a[2, 1] - a[0, 1] * a[2, 2]
+    c02 = a[0, 1] * a[1, 2] - a[0, 2] * a[1, 1]
+    det = a[0, 0] * c00 + a[1, 0] * c01 + a[2, 0] * c02
+    c11, c12 = a[0, 0] * a[2, 2] - a[0, 2] * a[2, 0], a[0, 2] * a[1, 0] - a[0, 0] * a[1, 2]
+    c22 = a[0, 0] * a[1, 1] - a[0, 1] * a[1, 0]
+    x[0] = (c00 * b[0] + c01 * b[1] + c02 * b[2]) / det
+    x[1] = (c01 * b[0] + c11 * b[1] + c12 * b[2]) / det
+    x[2] = (c02 * b[0] + c12 * b[1] + c22 * b[2]) / det
+
+
+@njit(cache=True)
+def place_all(
+    base_mm: Array,
+    base_yaw_rad: Array,
+    first: NDArray[np.int64],
+    is_slide: NDArray[np.bool_],
+    link_mm: Array,
+    low: Array,
+    high: Array,
+    back: Array,
+    centres_mm: Array,
+    yaws_rad: Array,
+    near: Array,
+    left_mm: Array,
+) -> Array:
+    """Kernel of `place_contacts`; `left_mm` (n_fingers,) receives the distances left."""
+    joints = np.empty(near.shape[0])
+    for f in range(base_mm.shape[0]):
+        a, b = first[f], first[f + 1]
+        joints[a:b], left_mm[f] = _place(
+            base_mm[f], base_yaw_rad[f], is_slide[a:b], link_mm[a:b], low[a:b], high[a:b], back[f], centres_mm[f],
+            yaws_rad[f], near[a:b],
+        )  # fmt: skip
+    return joints
