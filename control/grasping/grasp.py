@@ -17,8 +17,8 @@ class Grasp:
 
     Attributes
     ----------
-    points_mm, normals : (n_fingers, 2) contacts on the outline and outward unit normals there, in the grasp frame. The grasp frame
-        coincides with the part frame when the fingers close; as tips roll, the part turns a little further than the grasp.
+    points_mm, normals : (n_fingers, 2) contacts on the outline and outward unit normals there, in the grasp frame, which is
+        the part frame when the fingers close; as tips roll, the part turns a little further than the grasp.
     jaw_turn_rad : (n_fingers,) from a contact's normal to the direction of the jaw that lies flat there; nan for round tips.
     closure : quality ε of the contacts, see `contacts.closure`.
     """

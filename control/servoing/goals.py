@@ -23,7 +23,7 @@ class Kind(StrEnum):
 class Goal:
     """Where the part shall be, how closely, and for how long.
 
-    `pose` is hand_from_part; coordinates that `kind` leaves free are ignored. A turn takes its yaw as the signed amount, not wrapped.
+    `pose` is hand_from_part; what `kind` leaves free is ignored. A turn takes its yaw as the signed amount, not wrapped.
     """
 
     id: str

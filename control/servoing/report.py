@@ -40,7 +40,7 @@ class Inputs:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Command:
-    """What goes to the board: pulse widths (n_joints,) [µs] in joint order, None for no pulses; `rearm` unlatches its watchdog."""
+    """What goes to the board: pulse widths (n_joints,) [µs] in joint order, None for none; `rearm` unlatches its watchdog."""
 
     pulses_us: Array | None
     rearm: bool = False
