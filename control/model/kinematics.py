@@ -172,9 +172,7 @@ def finger_jacobian(model: HandModel, finger: int, joints: Array, point_mm: Arra
     return jacobian
 
 
-def place_contact(
-    model: HandModel, finger: int, centre_mm: Array, near: Array, jaw_yaw_rad: float | None = None
-) -> tuple[Array, float]:
+def place_contact(model: HandModel, finger: int, centre_mm: Array, near: Array, jaw_yaw_rad: float | None = None) -> tuple[Array, float]:
     """Joint values of one finger that bring its contact centre to a point (inverse kinematics).
 
     Parameters

@@ -1,0 +1,170 @@
+"""Everything a hand can do with a part: its grasps with their reaches, the loose cage to start from, and what that covers."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from functools import lru_cache
+
+import numpy as np
+
+from control.grasping.grasp import Grasp, base_bearings
+from control.grasping.primitives import Primitives, primitives_of
+from control.grasping.reach import PITCH, Node, Reach, flood
+from control.grasping.templates import LEFT_MM, Bench, best_at, needs_one_angle
+from control.model.kinematics import HandModel
+from hw_profiles.geometry import Array, Pose2
+from hw_profiles.part import Part
+
+ANGLE_STEP_RAD = math.radians(15.0)
+PARK_PHASES_RAD = np.radians(np.arange(0.0, 95.0, 5.0))
+PARK_OPENINGS_MM = (14.0, 12.0, 10.0, 8.0, 6.0, 4.0, 3.0, 2.0)
+PARK_MARGIN_MM = 2.0
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Option:
+    """A grasp that can hold the part at some pose: index of its reach, and the ring pose (3,) there, yaw unwrapped."""
+
+    reach_index: int
+    ring: Array
+    margin_mm: float
+
+
+@dataclass(frozen=True, eq=False)
+class Library:
+    """The grasps of one hand on one part.
+
+    Attributes
+    ----------
+    reaches : one for each part angle of a 15° grid that has a grasp; one alone for a disc.
+    park : joints (n_joints,) of the loose cage that a run starts from; the part may lie anywhere inside.
+    is_round : the part looks the same at every angle, so a grasp may take it up at any.
+    """
+
+    bench: Bench
+    reaches: tuple[Reach, ...]
+    park: Array
+    is_round: bool
+    loose_mm: float
+
+    @classmethod
+    def of(cls, hand: HandModel, part: Part, margin_mm: float, loose_mm: float) -> Library:
+        """Search, check and flood; takes about a second. `margin_mm` is what the cage certificate must show, −inf for none."""
+        bench = Bench.of(hand, part, margin_mm)
+        is_round = needs_one_angle(part)
+        yaws = [0.0] if is_round else list(np.arange(-math.pi, math.pi - 1e-9, ANGLE_STEP_RAD))
+        reaches = []
+        for yaw in yaws:
+            found = best_at(bench, yaw)
+            if found is not None:
+                reaches.append(flood(bench, found[0], Pose2(0.0, 0.0, yaw)))
+        return cls(bench, tuple(reaches), park_posture(bench), is_round, loose_mm)
+
+    def options(self, pose: Pose2) -> list[Option]:
+        """Every way to take the part up at a pose, best cage margin first."""
+        found = []
+        for index, reach in enumerate(self.reaches):
+            for ring in self._rings(reach, pose):
+                margin_mm = reach.cell_margin_mm(ring)
+                if margin_mm > -math.inf:
+                    found.append(Option(index, ring, margin_mm))
+        return sorted(found, key=lambda option: -option.margin_mm)
+
+    def _rings(self, reach: Reach, pose: Pose2) -> list[Array]:
+        if not self.is_round:
+            return [np.array([pose.x_mm, pose.y_mm, reach.yaw_near(pose.yaw_rad)])]
+        yaws = reach.origin[2] + PITCH[2] * (np.arange(reach.margin_mm.shape[2] - 1) + 0.5)
+        return [np.array([pose.x_mm, pose.y_mm, yaw]) for yaw in yaws]
+
+    def can_hold(self, pose: Pose2) -> bool:
+        """Whether any grasp can hold the part at a pose."""
+        return bool(self.options(pose))
+
+    def can_hold_at(self, x_mm: float, y_mm: float) -> bool:
+        """Whether any grasp can hold the part at a position, at whatever angle."""
+        for reach in self.reaches:
+            i, j, _ = reach.cell(np.array([x_mm, y_mm, reach.origin[2]]))
+            n_x, n_y, _ = reach.margin_mm.shape
+            if 0 <= i < n_x - 1 and 0 <= j < n_y - 1:
+                held = (reach.margin_mm[i : i + 2, j : j + 2] > -np.inf).all(axis=(0, 1))
+                if (held[:-1] & held[1:]).any():
+                    return True
+        return False
+
+    def nearest(self, pose: Pose2, angle_matters: bool) -> Pose2 | None:
+        """The nearest pose that can be held; an angle counts as its arc at the part's circumradius."""
+        best, best_cost = None, math.inf
+        for reach in self.reaches:
+            centres, margins = _cells(reach)
+            held = centres[margins > -np.inf]
+            if not len(held):
+                continue
+            turn = np.angle(np.exp(1j * (held[:, 2] - pose.yaw_rad)))
+            if self.is_round or not angle_matters:
+                turn = np.zeros(len(held))
+            offset = np.clip(np.abs(held[:, :2] - pose.xy_mm) - PITCH[:2] / 2.0 + 1e-3, 0.0, None)
+            turned = np.clip(np.abs(turn) - PITCH[2] / 2.0 + 1e-3, 0.0, None)
+            cost = (offset**2).sum(axis=1) + (turned * self.bench.part.circumradius_mm) ** 2
+            k = int(np.argmin(cost))
+            if cost[k] < best_cost:
+                xy = held[k, :2] + np.sign(pose.xy_mm - held[k, :2]) * (np.abs(pose.xy_mm - held[k, :2]) - offset[k])
+                yaw = pose.yaw_rad if not angle_matters or self.is_round else pose.yaw_rad + math.copysign(turned[k], turn[k])
+                best, best_cost = Pose2(float(xy[0]), float(xy[1]), math.remainder(yaw, 2.0 * math.pi)), float(cost[k])
+        return best
+
+    def primitives(self, reach_index: int, cell: Node) -> Primitives:
+        """The primitives of a cell of one of the reaches."""
+        return _cached_primitives(self, reach_index, cell)
+
+
+@lru_cache(maxsize=512)
+def _cached_primitives(library: Library, reach_index: int, cell: Node) -> Primitives:
+    return primitives_of(library.bench.hand, library.reaches[reach_index], cell, library.loose_mm)
+
+
+def _cells(reach: Reach) -> tuple[Array, Array]:
+    """Centres (k, 3) of all cells and the least margin over each one's corners (k,)."""
+    m = reach.margin_mm
+    least = np.minimum.reduce(
+        [m[a : m.shape[0] - 1 + a, b : m.shape[1] - 1 + b, c : m.shape[2] - 1 + c] for a in (0, 1) for b in (0, 1) for c in (0, 1)]
+    )
+    index = np.stack(np.meshgrid(*[np.arange(n) for n in least.shape], indexing="ij"), axis=-1)
+    return (reach.origin + PITCH * (index + 0.5)).reshape(-1, 3), least.reshape(-1)
+
+
+def park_posture(bench: Bench) -> Array:
+    """The widest ring of fingers about the palm centre whose gaps still hold the part in, wherever inside it lies.
+
+    Where no ring does (no cage required), the widest that the fingers can form.
+    """
+    widest: Array | None = None
+    for opening_mm in PARK_OPENINGS_MM:
+        best_margin, best = -math.inf, None
+        for phase in np.concatenate([-PARK_PHASES_RAD, PARK_PHASES_RAD[1:]]):
+            joints, left_mm = ring_posture(bench, float(phase), opening_mm)
+            if left_mm > LEFT_MM or bench.clearances.between_fingers(joints) < 1.0:
+                continue
+            if bench.clearances.to_part(joints, Pose2(0.0, 0.0, 0.0)).min() < 1.0:
+                continue
+            margin_mm = bench.ring.certify(joints, np.zeros(3)).margin_mm
+            if margin_mm > best_margin:
+                best_margin, best = margin_mm, joints
+        if best is not None and best_margin >= PARK_MARGIN_MM:
+            return best
+        if best is not None and widest is None:
+            widest = best
+    return bench.hand.home if widest is None else widest
+
+
+def ring_posture(bench: Bench, phase_rad: float, opening_mm: float) -> tuple[Array, float]:
+    """Contacts on a circle about the palm centre at `opening_mm` from the part's circumcircle, turned by a phase from their bases."""
+    bearings = base_bearings(bench.hand, np.zeros(2)) + phase_rad
+    rays = np.stack([np.cos(bearings), np.sin(bearings)], axis=1)
+    best = (bench.hand.home, math.inf)
+    for jaw_turn in (-math.pi / 2.0, math.pi / 2.0) if bench.hand.is_jaw.any() else (math.nan,):
+        turns = np.where(bench.hand.is_jaw, jaw_turn, math.nan)
+        ring = Grasp(bench.part.circumradius_mm * rays, rays, turns, 0.0)
+        found = ring.joints(bench.hand, Pose2(0.0, 0.0, 0.0), opening_mm, bench.hand.home)
+        best = min(best, found, key=lambda pair: pair[1])
+    return best

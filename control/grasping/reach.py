@@ -1,0 +1,110 @@
+"""Which poses a grasp can hold: its reach, on a lattice of ring poses flooded outward from where the grasp was found."""
+
+from __future__ import annotations
+
+import itertools
+import math
+from collections import deque
+from dataclasses import dataclass
+
+import numpy as np
+
+from control.grasping.grasp import Grasp
+from control.grasping.templates import LEFT_MM, Bench
+from hw_profiles.geometry import Array, Pose2
+
+PITCH = np.array([10.0, 10.0, math.radians(15.0)])  # lattice steps: mm, mm, rad
+N_HALF = (8, 8, 12)  # steps either way of the origin
+CORNERS = np.array(list(itertools.product((0, 1), repeat=3)))  # of a lattice cell, (8, 3)
+
+Node = tuple[int, int, int]
+
+
+@dataclass(frozen=True, eq=False)
+class Reach:
+    """A grasp and the poses hand_from_grasp at which it can hold.
+
+    Attributes
+    ----------
+    origin : (3,) pose of lattice node (0, 0, 0): mm, mm, rad; yaw is not wrapped.
+    margin_mm : (n_x, n_y, n_yaw) cage margin at each node; −inf where the grasp cannot hold.
+    joints : (n_x, n_y, n_yaw, n_joints) of the touching grasp there; nan where it cannot hold.
+    """
+
+    grasp: Grasp
+    origin: Array
+    margin_mm: Array
+    joints: Array
+
+    def cell(self, pose: Array) -> Node:
+        """Lattice cell that holds a pose (3,) with unwrapped yaw."""
+        return tuple(int(k) for k in np.floor((pose - self.origin) / PITCH + 1e-9))  # type: ignore[return-value]
+
+    def cell_margin_mm(self, pose: Array) -> float:
+        """Least cage margin over the corners of the cell that holds a pose (3,); −inf where a corner cannot be held."""
+        i, j, k = self.cell(pose)
+        n_x, n_y, n_yaw = self.margin_mm.shape
+        if not (0 <= i < n_x - 1 and 0 <= j < n_y - 1 and 0 <= k < n_yaw - 1):
+            return -math.inf
+        return float(self.margin_mm[i : i + 2, j : j + 2, k : k + 2].min())
+
+    def holds(self, pose: Array) -> bool:
+        """Whether the whole cell around a pose (3,) can be held."""
+        return self.cell_margin_mm(pose) > -math.inf
+
+    def yaw_near(self, yaw_rad: float) -> float:
+        """The same direction, unwrapped to lie within half a turn of the lattice's middle."""
+        middle = self.origin[2] + PITCH[2] * (self.margin_mm.shape[2] - 1) / 2.0
+        return float(middle + math.remainder(yaw_rad - middle, 2.0 * math.pi))
+
+    def yaw_span(self, x_mm: float, y_mm: float, yaw_rad: float) -> tuple[float, float]:
+        """Least and greatest yaw that can be held at (x, y) without leaving, starting from `yaw_rad` (which must be held)."""
+        i, j, k = self.cell(np.array([x_mm, y_mm, yaw_rad]))
+        held = (self.margin_mm[i : i + 2, j : j + 2] > -np.inf).all(axis=(0, 1))
+        low, high = k, k + 1
+        while low > 0 and held[low - 1]:
+            low -= 1
+        while high < len(held) - 1 and held[high + 1]:
+            high += 1
+        return float(self.origin[2] + low * PITCH[2]), float(self.origin[2] + high * PITCH[2])
+
+
+def flood(bench: Bench, grasp: Grasp, start: Pose2) -> Reach:
+    """The connected set of poses that a grasp can hold, outward from a start that it can hold.
+
+    Each node starts its inverse kinematics from the neighbour it was reached from, so that no finger flips over.
+    """
+    shape = tuple(2 * n + 1 for n in N_HALF)
+    origin = start.as_array() - PITCH * np.array(N_HALF)
+    margins = np.full(shape, -np.inf)
+    joints = np.full((*shape, bench.hand.n_joints), np.nan)
+    seen = np.zeros(shape, dtype=bool)
+    queue: deque[tuple[Node, Array]] = deque([(N_HALF, bench.hand.home)])
+    seen[N_HALF] = True
+    while queue:
+        node, near = queue.popleft()
+        pose = Pose2.from_array(origin + PITCH * np.array(node))
+        found, left_mm = grasp.joints(bench.hand, pose, 0.0, near)
+        if left_mm > LEFT_MM:
+            continue
+        margin_mm = bench.margin_at(found, pose)
+        if margin_mm < bench.margin_mm:
+            continue
+        margins[node], joints[node] = margin_mm, found
+        for neighbour in _neighbours(node, shape):
+            if not seen[neighbour]:
+                seen[neighbour] = True
+                queue.append((neighbour, found))
+    for array in (origin, margins, joints):
+        array.setflags(write=False)
+    return Reach(grasp, origin, margins, joints)
+
+
+def _neighbours(node: Node, shape: tuple[int, ...]) -> list[Node]:
+    found: list[Node] = []
+    for axis, step in itertools.product(range(3), (-1, 1)):
+        place = list(node)
+        place[axis] += step
+        if 0 <= place[axis] < shape[axis]:
+            found.append((place[0], place[1], place[2]))
+    return found
