@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from typing import Protocol
 
+from control.servoing.report import BoardHealth, Command, Inputs, Report
 from vision.frames import Frame
 
 
@@ -38,5 +39,26 @@ class BytePort(Protocol):
 
     def read(self) -> bytes:
         """Whatever has arrived since the last call; b"" when nothing has. Raises DeviceError when the line is gone."""
+
+    def close(self) -> None: ...
+
+
+class ServoLink(Protocol):
+    """Carries commands to a servo board, in whatever bytes the board understands."""
+
+    def send(self, command: Command) -> None:
+        """Send a command; never blocks. Raises DeviceError when the line is gone."""
+
+    def health(self) -> BoardHealth | None:
+        """What the board last said of itself; None for a board that says nothing."""
+
+    def close(self) -> None: ...
+
+
+class Recorder(Protocol):
+    """Keeps what the loop saw and did."""
+
+    def append(self, frame: Frame | None, inputs: Inputs, command: Command, report: Report) -> None:
+        """Take in one tick; never blocks."""
 
     def close(self) -> None: ...

@@ -1,0 +1,41 @@
+"""Puts one rig together, real or simulated: devices, tracker, controller, loop."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from control.servoing.controller import Controller
+from control.servoing.memory import Memory
+from hw_profiles.geometry import Pose2
+from hw_profiles.rig import Rig
+from service.loop import Loop
+from service.servo_link import FramedLink
+from service.simulated.bench import LockstepBench
+from service.simulated.variation import Variation
+from service.trials.run import Stage
+from vision.tracker import Tracker
+
+
+def simulated_stage(rig: Rig, variation: Variation, seed: int) -> Stage:
+    """A rig on the simulated bench in simulated time: one seed, one run."""
+    controller = Controller.of(rig)
+    rng = np.random.default_rng([seed, 2])
+    bench = LockstepBench(rig, controller.library.park, drawn_start(controller, rng), variation, seed)
+    loop = Loop(controller, bench.camera, Tracker(rig.camera, rig.part), FramedLink(rig, bench.port, bench.clock), bench.clock)
+
+    def restart() -> None:
+        bench.place(controller.library.park, drawn_start(controller, rng))
+        loop.memory = Memory(now_us=bench.clock.now_us())
+
+    return Stage(loop, bench.truth, lambda: bench.world.escaped, restart)
+
+
+def drawn_start(controller: Controller, rng: np.random.Generator) -> Pose2:
+    """A pose inside the loose cage that no finger touches: as if somebody had dropped the part in."""
+    bench, park = controller.library.bench, controller.library.park
+    for spread_mm in np.linspace(8.0, 0.0, 200):
+        x_mm, y_mm = rng.uniform(-spread_mm, spread_mm, size=2)
+        pose = Pose2(float(x_mm), float(y_mm), float(rng.uniform(-np.pi, np.pi)))
+        if bench.clearances.to_part(park, pose).min() > 0.5:
+            return pose
+    return Pose2(0.0, 0.0, 0.0)
