@@ -96,8 +96,7 @@ class Library:
         """The nearest pose that can be held; an angle counts as its arc at the part's circumradius."""
         best, best_cost = None, math.inf
         for reach in self.reaches:
-            centres, margins = _cells(reach)
-            held = centres[margins > -np.inf]
+            held = _cells(reach)
             if not len(held):
                 continue
             turn = np.angle(np.exp(1j * (held[:, 2] - pose.yaw_rad)))
@@ -123,14 +122,9 @@ def _cached_primitives(library: Library, reach_index: int, cell: Node) -> Primit
     return primitives_of(library.bench.hand, library.reaches[reach_index], cell, library.loose_mm)
 
 
-def _cells(reach: Reach) -> tuple[Array, Array]:
-    """Centres (k, 3) of all cells and the least margin over each one's corners (k,)."""
-    m = reach.margin_mm
-    least = np.minimum.reduce(
-        [m[a : m.shape[0] - 1 + a, b : m.shape[1] - 1 + b, c : m.shape[2] - 1 + c] for a in (0, 1) for b in (0, 1) for c in (0, 1)]
-    )
-    index = np.stack(np.meshgrid(*[np.arange(n) for n in least.shape], indexing="ij"), axis=-1)
-    return (reach.origin + PITCH * (index + 0.5)).reshape(-1, 3), least.reshape(-1)
+def _cells(reach: Reach) -> Array:
+    """Centres (k, 3) of the cells that can be held."""
+    return np.asarray(reach.origin + PITCH * (np.argwhere(reach.held_cells()) + 0.5))
 
 
 def park_posture(bench: Bench) -> Array:

@@ -8,6 +8,7 @@ from collections import deque
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from control.grasping.grasp import Grasp
 from control.grasping.templates import LEFT_MM, Bench
@@ -47,6 +48,17 @@ class Reach:
         if not (0 <= i < n_x - 1 and 0 <= j < n_y - 1 and 0 <= k < n_yaw - 1):
             return -math.inf
         return float(self.margin_mm[i : i + 2, j : j + 2, k : k + 2].min())
+
+    def cell_margins_mm(self) -> Array:
+        """Least margin over each cell's corners (n_x − 1, n_y − 1, n_yaw − 1)."""
+        m = self.margin_mm
+        n_x, n_y, n_yaw = m.shape
+        shifted = [m[a : n_x - 1 + a, b : n_y - 1 + b, c : n_yaw - 1 + c] for a, b, c in CORNERS]
+        return np.asarray(np.minimum.reduce(shifted))
+
+    def held_cells(self) -> NDArray[np.bool_]:
+        """Which cells can be held (n_x − 1, n_y − 1, n_yaw − 1)."""
+        return self.cell_margins_mm() > -np.inf
 
     def holds(self, pose: Array) -> bool:
         """Whether the whole cell around a pose (3,) can be held."""
