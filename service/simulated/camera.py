@@ -1,0 +1,365 @@
+"""Frames of the simulated camera: the plate, the part with its tag, and the fingers above it, through the profile's lens.
+
+Modelled: true perspective of the plate (z = 0), the part's sides and its top face (z = height) with the tag, lens distortion, blur
+of lens and pixel (0.58 px), motion during the exposure when a twist is given, fingers FINGER_ABOVE_MM above the top face so that
+they hide what is under them, soft shadows on the plate, sensor noise. Not modelled: rolling shutter, defocus, shadows on the part,
+specular glare, Bayer mosaic, compression. The plate has its noise baked in: N_PLATES noisy copies, one picked at random for each
+frame; what moves gets noise from a seeded bank read at a random place.
+"""
+
+from __future__ import annotations
+
+import math
+
+import cv2
+import numpy as np
+from numba import njit
+from numpy.typing import NDArray
+
+from control.model.kinematics import HandModel, centre_lines
+from hw_profiles.camera import Camera
+from hw_profiles.geometry import Array, Pose2
+from hw_profiles.part import Part
+from service.simulated import scenery
+from vision.camera_model import model_of
+from vision.frames import Pixels
+
+FINGER_ABOVE_MM = 4.0
+ALLOY, RUBBER, HUB, CABLE = (128.0, 108.0, 58.0), (54.0, 50.0, 50.0), (150.0, 148.0, 142.0), (52.0, 58.0, 64.0)
+SIDE = (120.0, 124.0, 126.0)
+LIGHT = np.array([-0.35, 0.45, 0.82])  # toward the lamp, hand frame
+GREY = np.array([0.114, 0.587, 0.299])  # luma weights of blue, green, red (ITU-R BT.601)
+SHADOW_PER_MM = np.array([0.30, -0.38])  # how far a shadow falls beside its owner, per mm of height
+N_PLATES = 6
+BANK = 1 << 16
+MAX_SUBFRAMES = 24
+
+
+class Renderer:
+    """Renders frames of one camera, hand and part. The same seed and the same calls give the same pixels."""
+
+    def __init__(self, camera: Camera, hand_model: HandModel, part: Part, seed: int) -> None:
+        self.camera, self.hand_model, self.part = camera, hand_model, part
+        self._rng = np.random.default_rng(seed)
+        self._model = model_of(camera)
+        self._n_channels = 1 if camera.pixel_format == "mono8" else 3
+        self._top_mm = self._plane_map(part.height_mm)
+        self._finger_mm = self._plane_map(part.height_mm + FINGER_ABOVE_MM)
+        self._plate_mm = self._plane_map(0.0)
+        self._plate = scenery.plate_image(self._model, hand_model, self._plate_mm, np.random.default_rng(7))
+        self._scale = self._model.px_per_mm((0.0, 0.0), part.height_mm)
+        texture, self._texel_from_part = scenery.face_texture(part, self._scale)
+        self._texture = np.dstack([self._as_pixels(texture[..., :3].astype(np.float32)), texture[..., 3]])
+        self._unit_noise = self._rng.standard_normal(BANK, dtype=np.float32)
+        self._noise_sd = -1.0
+        self._set_noise(camera.noise_sd)
+        self._cable_rad = float(self._rng.uniform(-math.pi, math.pi))
+
+    def render(
+        self,
+        part_pose: Pose2,
+        joints: Array,
+        noise: float = 1.0,
+        occlusion: float = 0.0,
+        twist: Array | None = None,
+    ) -> Pixels:
+        """One frame, uint8 (height, width) or (height, width, 3) in BGR order.
+
+        Parameters
+        ----------
+        part_pose : hand_from_part at the middle of the exposure.
+        joints : (n_joints,) true joint values.
+        noise : multiplies the profile's noise_sd.
+        occlusion : 0 … 1, share of the tag's side that a cable hides, at a random place and a slowly turning angle.
+        twist : (3,) velocity of the part [mm/s, mm/s, rad/s]; smears it over the exposure. None: at rest.
+        """
+        self._set_noise(noise * self.camera.noise_sd)
+        canvas = self._noisy_plates[int(self._rng.integers(N_PLATES))].copy()
+        start = int(self._rng.integers(BANK))
+        capsules = self._capsules(joints)
+        self._draw_shadows(canvas, part_pose, capsules)
+        self._draw_walls(canvas, part_pose, start)
+        self._draw_face(canvas, part_pose, twist, start)
+        self._draw_bars(canvas, capsules, start)
+        if occlusion > 0.0:
+            self._draw_bars(canvas, self._cable(part_pose, occlusion), start)
+        return canvas[..., 0] if self._n_channels == 1 else canvas
+
+    def _set_noise(self, noise_sd: float) -> None:
+        if noise_sd == self._noise_sd:
+            return
+        self._noise_sd = noise_sd
+        self._bank = np.clip(np.round(self._unit_noise * noise_sd), -127, 127).astype(np.int8)
+        shape = (*self._plate.shape[:2], self._n_channels)
+        plate = self._plate if self._n_channels == 3 else (self._plate @ GREY.astype(np.float32))[..., None]
+        grain = np.random.default_rng(11)  # the same for every seed: the plates only have to differ from each other
+        self._noisy_plates = []
+        for _ in range(N_PLATES):
+            noisy = plate + noise_sd * grain.standard_normal(shape, dtype=np.float32)
+            self._noisy_plates.append(np.clip(np.round(noisy), 0, 255).astype(np.uint8))
+
+    def _plane_map(self, z_mm: float) -> NDArray[np.float32]:
+        """Where on the plane z = z_mm each pixel looks (height, width, 2) [mm]."""
+        v, u = np.mgrid[: self.camera.height_px, : self.camera.width_px].astype(float)
+        return self._model.plane_points(np.stack([u, v], axis=-1), z_mm).astype(np.float32)
+
+    def _as_pixels(self, image: NDArray[np.float32]) -> Pixels:
+        if self._n_channels == 1:
+            image = (image @ GREY.astype(np.float32))[..., None]
+        return np.clip(np.round(image), 0, 255).astype(np.uint8)
+
+    def _colour(self, colour: scenery.Colour) -> list[float]:
+        """Three numbers a kernel can use, whatever the pixel format."""
+        return list(colour) if self._n_channels == 3 else [float(GREY @ np.array(colour))] * 3
+
+    def _capsules(self, joints: Array) -> Array:
+        """Fingers as capsules (n, 8): ax, ay, bx, by, radius [mm], blue, green, red; what is drawn later lies above."""
+        hand, rows = self.hand_model, []
+        alloy, hub, rubber = self._colour(ALLOY), self._colour(HUB), self._colour(RUBBER)
+        for f, line in enumerate(centre_lines(hand, joints)):
+            radii = hand.link_radius_mm[hand.joints_of(f)]
+            for j, radius in enumerate(radii):
+                rows.append([*line[j], *line[j + 1], radius, *alloy])
+            for j, radius in enumerate(radii):
+                rows.append([*line[j], *line[j], 0.62 * radius, *hub])
+            rows.append([*line[-1], *line[-1], hand.tip_radius_mm[f], *rubber])
+        return np.array(rows)
+
+    def _cable(self, pose: Pose2, occlusion: float) -> Array:
+        """A cable across the tag, as wide as the share of the tag's side it hides."""
+        side = self.part.fiducial.size_mm
+        self._cable_rad += float(self._rng.normal(0.0, 0.05))
+        width = occlusion * side
+        beside = float(self._rng.uniform(-0.5, 0.5)) * (side - width)
+        cos, sin = math.cos(self._cable_rad), math.sin(self._cable_rad)
+        x, y = pose.apply([self.part.fiducial.x_mm, self.part.fiducial.y_mm]) + beside * np.array([-sin, cos])
+        reach = 1.5 * side
+        return np.array([[x - reach * cos, y - reach * sin, x + reach * cos, y + reach * sin, width / 2, *self._colour(CABLE)]])
+
+    def _bars(self, capsules: Array, z_mm: float, outer_mm: Array, shift_mm: Array | float = 0.0) -> Array:
+        """Where the image shows capsules of the plane z_mm: (n, 5) ends ua, va, ub, vb and a safe half width [px]."""
+        ends = self._model.project_plane(capsules[:, :4].reshape(-1, 2, 2) + shift_mm, z_mm)
+        return np.concatenate([ends.reshape(-1, 4), (outer_mm * self._scale * 1.15 + 2.0)[:, None]], axis=1)
+
+    def _draw_bars(self, canvas: Pixels, capsules: Array, start: int) -> None:
+        soft_mm = 1.6 / self._scale
+        bars = self._bars(capsules, self.part.height_mm + FINGER_ABOVE_MM, capsules[:, 4] + soft_mm)
+        _draw_capsules(canvas, self._finger_mm, capsules, bars, LIGHT, soft_mm, self._bank, start)
+
+    def _cast(self, canvas: Pixels, capsules: Array, shift_mm: Array, soft_mm: float, depth: float) -> None:
+        moved = capsules + np.array([*shift_mm, *shift_mm, 0.0, 0.0, 0.0, 0.0])
+        _shade(canvas, self._plate_mm, moved, self._bars(moved, 0.0, moved[:, 4] + soft_mm), soft_mm, depth)
+
+    def _draw_shadows(self, canvas: Pixels, pose: Pose2, capsules: Array) -> None:
+        height = self.part.height_mm
+        links = capsules[np.any(capsules[:, :2] != capsules[:, 2:4], axis=1)]
+        self._cast(canvas, links, SHADOW_PER_MM * height * 0.8, 4.0, 0.28)
+        middle, far = pose.xy_mm, pose.xy_mm + SHADOW_PER_MM * height
+        radius = math.sqrt(2.0 * self.part.inertia_gmm2 / self.part.mass_g)
+        self._cast(canvas, np.array([[*middle, *far, radius, 0.0, 0.0, 0.0]]), np.zeros(2), 5.0, 0.40)
+
+    def _draw_walls(self, canvas: Pixels, pose: Pose2, start: int) -> None:
+        """The walls that face the camera, each shaded by how it faces the lamp."""
+        outline = pose.apply(self.part.outline_mm)[:: 2 if len(self.part.outline_mm) > 48 else 1]
+        edge = np.roll(outline, -1, axis=0) - outline
+        normal = np.stack([edge[:, 1], -edge[:, 0]], axis=1) / np.linalg.norm(edge, axis=1)[:, None]
+        facing = np.sum(normal * (np.array(self.camera.mount.eye_mm[:2]) - outline), axis=1) > 0.0
+        top, foot = self._model.project_plane(outline, self.part.height_mm), self._model.project_plane(outline, 0.0)
+        quads = np.stack([foot, np.roll(foot, -1, axis=0), np.roll(top, -1, axis=0), top], axis=1)[facing]
+        low, high = self._box(quads.reshape(-1, 2))
+        if len(quads) == 0 or np.any(high <= low):
+            return
+        light = 0.72 + 0.28 * normal[facing] @ LIGHT[:2] / math.hypot(LIGHT[0], LIGHT[1])
+        cover, shade = np.zeros((2, high[1] - low[1], high[0] - low[0]), np.uint8)
+        for quad, bright in zip(np.round((quads - low) * 16).astype(np.int32), light, strict=True):
+            cv2.fillConvexPoly(cover, quad, 255, cv2.LINE_8, 4)
+            cv2.fillConvexPoly(shade, quad, 200.0 * bright, cv2.LINE_8, 4)
+        cover, shade = (cv2.GaussianBlur(layer, (3, 3), scenery.PIXEL_BLUR_PX) for layer in (cover, shade))
+        _draw_shaded(canvas, cover, shade, np.array(self._colour(SIDE)) / 200.0, low[0], low[1], self._bank, start)
+
+    def _box(self, points_px: Array) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
+        """First and last-plus-one (column, row) of the pixels about some points (n, 2)."""
+        size = np.array([self.camera.width_px, self.camera.height_px])
+        low, high = np.floor(points_px.min(axis=0)) - 3, np.ceil(points_px.max(axis=0)) + 4
+        return np.clip(low, 0, size).astype(np.int64), np.clip(high, 0, size).astype(np.int64)
+
+    def _draw_face(self, canvas: Pixels, pose: Pose2, twist: Array | None, start: int) -> None:
+        poses = self._exposure_poses(pose, twist)
+        outlines = [Pose2.from_array(each).apply(self.part.outline_mm) for each in (poses[0], poses[-1])]
+        low, high = self._box(self._model.project_plane(np.concatenate(outlines), self.part.height_mm))
+        _draw_texture(canvas, self._top_mm, self._texture, self._texel_from_part, poses, low, high, self._bank, start)
+
+    def _exposure_poses(self, pose: Pose2, twist: Array | None) -> Array:
+        """Poses (n, 3) evenly over the exposure, half a pixel apart or less."""
+        if twist is None:
+            return pose.as_array()[None]
+        exposure_s = self.camera.exposure_ms * 1e-3
+        travel = exposure_s * (math.hypot(twist[0], twist[1]) + abs(twist[2]) * self.part.circumradius_mm)
+        n = int(np.clip(math.ceil(2.0 * travel * self._scale), 1, MAX_SUBFRAMES))
+        times = ((np.arange(n) + 0.5) / n - 0.5) * exposure_s
+        return np.asarray(pose.as_array() + times[:, None] * twist)
+
+
+@njit(cache=True)
+def _draw_texture(
+    canvas: Pixels,
+    plane_mm: NDArray[np.float32],
+    texture: Pixels,
+    texel_from_part: Array,
+    poses: Array,
+    low: NDArray[np.int64],
+    high: NDArray[np.int64],
+    bank: NDArray[np.int8],
+    start: int,
+) -> None:
+    """Blend a part-frame texture (its last channel is cover) over the canvas, averaged over the poses."""
+    n_channels = canvas.shape[2]
+    rows, columns = texture.shape[0], texture.shape[1]
+    scale, column_0, row_0 = texel_from_part[0], texel_from_part[1], texel_from_part[2]
+    turns = np.empty((poses.shape[0], 2))
+    for k in range(poses.shape[0]):
+        turns[k, 0], turns[k, 1] = math.cos(poses[k, 2]) * scale, math.sin(poses[k, 2]) * scale
+    total = np.empty(4)
+    for v in range(low[1], high[1]):
+        place = _bank_place(start, v)
+        for u in range(low[0], high[0]):
+            x, y = float(plane_mm[v, u, 0]), float(plane_mm[v, u, 1])
+            total[:] = 0.0
+            for k in range(poses.shape[0]):
+                dx, dy = x - poses[k, 0], y - poses[k, 1]
+                column = turns[k, 0] * dx + turns[k, 1] * dy + column_0
+                row = -turns[k, 1] * dx + turns[k, 0] * dy + row_0
+                if column < 0.0 or row < 0.0 or column >= columns - 1 or row >= rows - 1:
+                    continue
+                i, j = int(row), int(column)
+                fr, fc = row - i, column - j
+                w00, w01, w10, w11 = (1.0 - fr) * (1.0 - fc), (1.0 - fr) * fc, fr * (1.0 - fc), fr * fc
+                cover = (
+                    w00 * texture[i, j, n_channels] + w01 * texture[i, j + 1, n_channels]
+                    + w10 * texture[i + 1, j, n_channels] + w11 * texture[i + 1, j + 1, n_channels]
+                )  # fmt: skip
+                if cover <= 0.0:
+                    continue
+                total[3] += cover
+                for c in range(n_channels):
+                    total[c] += cover * (
+                        w00 * texture[i, j, c] + w01 * texture[i, j + 1, c] + w10 * texture[i + 1, j, c] + w11 * texture[i + 1, j + 1, c]
+                    )
+            if total[3] <= 0.0:
+                continue
+            per = 1.0 / (255.0 * poses.shape[0])
+            cover = total[3] * per
+            for c in range(n_channels):
+                value = canvas[v, u, c] * (1.0 - cover) + total[c] * per + cover * bank[(place + n_channels * u + c) & (BANK - 1)]
+                canvas[v, u, c] = np.uint8(min(max(value + 0.5, 0.0), 255.0))
+
+
+@njit(cache=True)
+def _bank_place(start: int, v: int) -> int:
+    """Where row v of a frame reads the noise bank."""
+    return start + 9973 * v
+
+
+@njit(cache=True)
+def _draw_shaded(
+    canvas: Pixels, cover: Pixels, shade: Pixels, colour: Array, u_0: int, v_0: int, bank: NDArray[np.int8], start: int
+) -> None:
+    """Blend colour · shade over the canvas where cover (255: fully) says so; shade comes premultiplied by cover."""
+    n_channels = canvas.shape[2]
+    for i in range(cover.shape[0]):
+        place = _bank_place(start, v_0 + i)
+        for j in range(cover.shape[1]):
+            if cover[i, j] == 0:
+                continue
+            u, v, weight = u_0 + j, v_0 + i, cover[i, j] / 255.0
+            for c in range(n_channels):
+                grain = weight * bank[(place + n_channels * u + c) & (BANK - 1)]
+                value = canvas[v, u, c] * (1.0 - weight) + colour[c] * shade[i, j] + grain
+                canvas[v, u, c] = np.uint8(min(max(value + 0.5, 0.0), 255.0))
+
+
+@njit(cache=True)
+def _row_span(bar: Array, v: int, width: int) -> tuple[int, int]:
+    """Columns (first, last plus one) of row v within reach of the segment bar = (ua, va, ub, vb, reach)."""
+    ua, va, ub, vb, reach = bar[0], bar[1], bar[2], bar[3], bar[4]
+    t_low, t_high = 0.0, 1.0
+    if abs(vb - va) > 1e-9:
+        t_1, t_2 = (v - reach - va) / (vb - va), (v + reach - va) / (vb - va)
+        t_low, t_high = max(0.0, min(t_1, t_2)), min(1.0, max(t_1, t_2))
+        if t_low > t_high:
+            return 0, 0
+    u_1, u_2 = ua + t_low * (ub - ua), ua + t_high * (ub - ua)
+    return max(int(min(u_1, u_2) - reach), 0), min(int(max(u_1, u_2) + reach) + 2, width)
+
+
+@njit(cache=True)
+def _draw_capsules(
+    canvas: Pixels,
+    plane_mm: NDArray[np.float32],
+    capsules: Array,
+    bars: Array,
+    light: Array,
+    soft_mm: float,
+    bank: NDArray[np.int8],
+    start: int,
+) -> None:
+    """Round bars lit from one side, edges as soft as the lens makes them."""
+    height, width, n_channels = canvas.shape
+    for k in range(capsules.shape[0]):
+        ax, ay, radius = capsules[k, 0], capsules[k, 1], capsules[k, 4]
+        ex, ey = capsules[k, 2] - ax, capsules[k, 3] - ay
+        per_length_sq = 0.0 if ex == 0.0 and ey == 0.0 else 1.0 / (ex * ex + ey * ey)
+        outer_sq, inner_sq = (radius + 0.5 * soft_mm) ** 2, max(radius - 0.5 * soft_mm, 0.0) ** 2
+        per_radius, per_soft = 1.0 / radius, 1.0 / soft_mm
+        first = max(int(min(bars[k, 1], bars[k, 3]) - bars[k, 4]), 0)
+        last = min(int(max(bars[k, 1], bars[k, 3]) + bars[k, 4]) + 2, height)
+        for v in range(first, last):
+            place = _bank_place(start, v)
+            u_low, u_high = _row_span(bars[k], v, width)
+            for u in range(u_low, u_high):
+                dx, dy = plane_mm[v, u, 0] - ax, plane_mm[v, u, 1] - ay
+                t = min(max((dx * ex + dy * ey) * per_length_sq, 0.0), 1.0)
+                dx, dy = dx - t * ex, dy - t * ey
+                distance_sq = dx * dx + dy * dy
+                if distance_sq > outer_sq:
+                    continue
+                flank = (dx * light[0] + dy * light[1]) * per_radius
+                rise = max(1.0 - distance_sq * per_radius * per_radius, 0.0)  # squared height of the round bar, of its radius
+                shade = 0.55 + 0.43 * flank + 0.62 * light[2] * rise * (1.6 - 0.6 * rise)
+                weight = 256
+                if distance_sq > inner_sq:
+                    cover = 0.5 + (radius - math.sqrt(distance_sq)) * per_soft
+                    weight = int(256.0 * cover * cover * (3.0 - 2.0 * cover))
+                for c in range(n_channels):
+                    grain = bank[(place + n_channels * u + c) & (BANK - 1)]
+                    colour = int(min(max(capsules[k, 5 + c] * shade + grain, 0.0), 255.0))
+                    canvas[v, u, c] = (canvas[v, u, c] * (256 - weight) + colour * weight + 128) >> 8
+
+
+@njit(cache=True)
+def _shade(canvas: Pixels, plane_mm: NDArray[np.float32], capsules: Array, bars: Array, soft_mm: float, depth: float) -> None:
+    """Darken the canvas under capsules, with soft edges, in squares of 2 × 2 pixels; overlapping shadows multiply."""
+    height, width, n_channels = canvas.shape
+    for k in range(capsules.shape[0]):
+        ax, ay, radius = capsules[k, 0], capsules[k, 1], capsules[k, 4]
+        ex, ey = capsules[k, 2] - ax, capsules[k, 3] - ay
+        per_length_sq = 0.0 if ex == 0.0 and ey == 0.0 else 1.0 / (ex * ex + ey * ey)
+        outer_sq = (radius + soft_mm) ** 2
+        per_outer_sq = 1.0 / outer_sq
+        first = max(int(min(bars[k, 1], bars[k, 3]) - bars[k, 4]), 0)
+        last = min(int(max(bars[k, 1], bars[k, 3]) + bars[k, 4]) + 2, height)
+        for v in range(first, last - 1, 2):
+            u_low, u_high = _row_span(bars[k], v, width)
+            for u in range(u_low, u_high - 1, 2):
+                dx, dy = plane_mm[v, u, 0] - ax, plane_mm[v, u, 1] - ay
+                t = min(max((dx * ex + dy * ey) * per_length_sq, 0.0), 1.0)
+                dx, dy = dx - t * ex, dy - t * ey
+                distance_sq = dx * dx + dy * dy
+                if distance_sq >= outer_sq:
+                    continue
+                inside = 1.0 - distance_sq * per_outer_sq
+                keep = int(256.0 * (1.0 - depth * inside * inside))
+                for i in range(2):
+                    for j in range(2):
+                        for c in range(n_channels):
+                            canvas[v + i, u + j, c] = (canvas[v + i, u + j, c] * keep + 128) >> 8

@@ -1,0 +1,81 @@
+"""Constant-velocity Kalman filter of a planar pose, with a chi-square gate.
+
+State: x, y [mm], yaw [rad, unwrapped], and their rates. Process: white-noise acceleration (Bar-Shalom, Li & Kirubarajan, Estimation
+with Applications to Tracking and Navigation, ch. 6.2). Time comes from the frames, so dropped frames and jitter need no care.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from hw_profiles.geometry import Array, Pose2, wrap_angle
+
+GATE = 21.108  # chi-square of 3 degrees of freedom, 99.99 %
+MOVE_NOISE = 4.5e4  # mm²/s³: a part that reaches 60 mm/s within two frames of 20 ms
+TURN_NOISE = 54.0  # rad²/s³: 120 °/s within two frames
+START_RATES = np.array([60.0, 60.0, 2.1]) ** 2
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Belief:
+    """Mean (6,) and covariance (6, 6) of pose and rates at an instant; arrays are not written to."""
+
+    at_us: int
+    mean: Array
+    covariance: Array
+
+    @property
+    def pose(self) -> Pose2:
+        return Pose2(float(self.mean[0]), float(self.mean[1]), wrap_angle(float(self.mean[2])))
+
+    @property
+    def twist(self) -> Array:
+        """(3,) mm/s, mm/s, rad/s."""
+        return self.mean[3:]
+
+
+def begin(at_us: int, pose: Pose2, covariance: Array) -> Belief:
+    """Belief from a first measured pose, at rest as far as is known."""
+    whole = np.zeros((6, 6))
+    whole[:3, :3], whole[3:, 3:] = covariance, np.diag(START_RATES)
+    return Belief(at_us, np.concatenate([pose.as_array(), np.zeros(3)]), whole)
+
+
+def transition(dt_s: float) -> tuple[Array, Array]:
+    """Transition (6, 6) and process noise (6, 6) over dt_s: Q = q [[dt³/3, dt²/2], [dt²/2, dt]] per axis."""
+    step, noise = np.eye(6), np.zeros((6, 6))
+    for axis, q in enumerate((MOVE_NOISE, MOVE_NOISE, TURN_NOISE)):
+        step[axis, axis + 3] = dt_s
+        noise[axis, axis] = q * dt_s**3 / 3.0
+        noise[axis, axis + 3] = noise[axis + 3, axis] = q * dt_s**2 / 2.0
+        noise[axis + 3, axis + 3] = q * dt_s
+    return step, noise
+
+
+def predict(belief: Belief, at_us: int) -> Belief:
+    """The belief carried to another instant (not earlier)."""
+    step, noise = transition(max(at_us - belief.at_us, 0) * 1e-6)
+    return Belief(at_us, step @ belief.mean, step @ belief.covariance @ step.T + noise)
+
+
+def surprise(belief: Belief, pose: Pose2, covariance: Array) -> float:
+    """Squared Mahalanobis distance of a measured pose from a belief at the same instant."""
+    innovation = _innovation(belief, pose)
+    return float(innovation @ np.linalg.solve(belief.covariance[:3, :3] + covariance, innovation))
+
+
+def update(belief: Belief, pose: Pose2, covariance: Array) -> Belief:
+    """The belief after a pose measured at the same instant (Kalman 1960; Joseph's form keeps it positive definite)."""
+    gain = np.linalg.solve(belief.covariance[:3, :3] + covariance, belief.covariance[:3, :]).T
+    keep = np.eye(6)
+    keep[:, :3] -= gain
+    after = keep @ belief.covariance @ keep.T + gain @ covariance @ gain.T
+    return Belief(belief.at_us, belief.mean + gain @ _innovation(belief, pose), after)
+
+
+def _innovation(belief: Belief, pose: Pose2) -> Array:
+    off = pose.as_array() - belief.mean[:3]
+    off[2] = wrap_angle(float(off[2]))
+    return off
