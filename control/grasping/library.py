@@ -9,16 +9,17 @@ from functools import lru_cache
 import numpy as np
 
 from control.grasping.grasp import Grasp, base_bearings
+from control.grasping.placing import PartShape
 from control.grasping.primitives import Primitives, primitives_of
 from control.grasping.reach import PITCH, Node, Reach, flood
-from control.grasping.templates import LEFT_MM, Bench, best_at, needs_one_angle
+from control.grasping.templates import FINGERS_APART_MM, LEFT_MM, Bench, best_at, needs_one_angle
 from control.model.kinematics import HandModel
 from hw_profiles.geometry import Array, Pose2
 from hw_profiles.part import Part
 
 ANGLE_STEP_RAD = math.radians(15.0)
 PARK_PHASES_RAD = np.radians(np.arange(0.0, 95.0, 5.0))
-PARK_OPENINGS_MM = (14.0, 12.0, 10.0, 8.0, 6.0, 4.0, 3.0, 2.0)
+PARK_OPENINGS_MM = (16.0, 14.0, 12.0, 10.0, 8.0, 6.0, 4.0, 3.0, 2.0)
 PARK_MARGIN_MM = 2.0
 
 
@@ -58,7 +59,7 @@ class Library:
         for yaw in yaws:
             found = best_at(bench, yaw)
             if found is not None:
-                reaches.append(flood(bench, found[0], Pose2(0.0, 0.0, yaw)))
+                reaches.append(flood(bench, found, np.array([0.0, 0.0, yaw])))
         return cls(bench, tuple(reaches), park_posture(bench), is_round, loose_mm)
 
     def options(self, pose: Pose2) -> list[Option]:
@@ -119,7 +120,7 @@ class Library:
 
 @lru_cache(maxsize=512)
 def _cached_primitives(library: Library, reach_index: int, cell: Node) -> Primitives:
-    return primitives_of(library.bench.hand, library.reaches[reach_index], cell, library.loose_mm)
+    return primitives_of(library.bench, library.reaches[reach_index], cell, library.loose_mm)
 
 
 def _cells(reach: Reach) -> Array:
@@ -137,9 +138,7 @@ def park_posture(bench: Bench) -> Array:
         best_margin, best = -math.inf, None
         for phase in np.concatenate([-PARK_PHASES_RAD, PARK_PHASES_RAD[1:]]):
             joints, left_mm = ring_posture(bench, float(phase), opening_mm)
-            if left_mm > LEFT_MM or bench.clearances.between_fingers(joints) < 1.0:
-                continue
-            if bench.clearances.to_part(joints, Pose2(0.0, 0.0, 0.0)).min() < 1.0:
+            if left_mm > LEFT_MM or bench.clearances.between_fingers(joints) < FINGERS_APART_MM:
                 continue
             margin_mm = bench.ring.certify(joints, np.zeros(3)).margin_mm
             if margin_mm > best_margin:
@@ -152,13 +151,14 @@ def park_posture(bench: Bench) -> Array:
 
 
 def ring_posture(bench: Bench, phase_rad: float, opening_mm: float) -> tuple[Array, float]:
-    """Contacts on a circle about the palm centre at `opening_mm` from the part's circumcircle, turned by a phase from their bases."""
+    """Fingers about the palm centre at `opening_mm` from the part's circumcircle, their tips turned by a phase from their bases."""
     bearings = base_bearings(bench.hand, np.zeros(2)) + phase_rad
     rays = np.stack([np.cos(bearings), np.sin(bearings)], axis=1)
+    radius_mm = bench.part.circumradius_mm
+    circle = PartShape.circle(radius_mm)
     best = (bench.hand.home, math.inf)
     for jaw_turn in (-math.pi / 2.0, math.pi / 2.0) if bench.hand.is_jaw.any() else (math.nan,):
-        turns = np.where(bench.hand.is_jaw, jaw_turn, math.nan)
-        ring = Grasp(bench.part.circumradius_mm * rays, rays, turns, 0.0)
-        found = ring.joints(bench.hand, Pose2(0.0, 0.0, 0.0), opening_mm, bench.hand.home)
+        ring = Grasp(radius_mm * rays, rays, np.where(bench.hand.is_jaw, jaw_turn, math.nan), 0.0)
+        found = ring.joints(bench.hand, circle, np.zeros(3), opening_mm, bench.hand.home)
         best = min(best, found, key=lambda pair: pair[1])
     return best

@@ -13,8 +13,8 @@ from dataclasses import dataclass
 import numpy as np
 
 from control.grasping.reach import CORNERS, PITCH, Reach
-from control.model.kinematics import HandModel
-from hw_profiles.geometry import Array, Pose2
+from control.grasping.templates import Bench
+from hw_profiles.geometry import Array
 
 TIGHT_MM = -6.0  # clearance of a tight primitive
 
@@ -27,14 +27,14 @@ class Primitives:
     joints: Array
 
 
-def primitives_of(hand: HandModel, reach: Reach, cell: tuple[int, int, int], loose_mm: float) -> Primitives:
+def primitives_of(bench: Bench, reach: Reach, cell: tuple[int, int, int], loose_mm: float) -> Primitives:
     """The sixteen primitives of a lattice cell whose corners the grasp can hold."""
     names, postures = [], []
     for corner in np.array(cell) + CORNERS:
         pose = reach.origin + PITCH * corner
         touching = reach.joints[tuple(corner)]
         for tightness, clearance_mm in (("tight", TIGHT_MM), ("loose", loose_mm)):
-            joints, _ = reach.grasp.joints(hand, Pose2.from_array(pose), clearance_mm, touching)
+            joints, _ = reach.grasp.joints(bench.hand, bench.shape, pose, clearance_mm, touching)
             names.append(f"{tightness} {pose[0]:+.0f} {pose[1]:+.0f} {math.degrees(pose[2]):+.0f}")
             postures.append(joints)
     stacked = np.array(postures)

@@ -11,8 +11,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from control.grasping.grasp import Grasp
-from control.grasping.templates import LEFT_MM, Bench
-from hw_profiles.geometry import Array, Pose2
+from control.grasping.templates import Bench
+from hw_profiles.geometry import Array
 
 PITCH = np.array([10.0, 10.0, math.radians(15.0)])  # lattice steps: mm, mm, rad
 N_HALF = (8, 8, 12)  # steps either way of the origin
@@ -81,13 +81,13 @@ class Reach:
         return float(self.origin[2] + low * PITCH[2]), float(self.origin[2] + high * PITCH[2])
 
 
-def flood(bench: Bench, grasp: Grasp, start: Pose2) -> Reach:
-    """The connected set of poses that a grasp can hold, outward from a start that it can hold.
+def flood(bench: Bench, grasp: Grasp, start: Array) -> Reach:
+    """The connected set of poses that a grasp can hold, outward from a ring pose (3,) that it can hold.
 
     Each node starts its inverse kinematics from the neighbour it was reached from, so that no finger flips over.
     """
     shape = tuple(2 * n + 1 for n in N_HALF)
-    origin = start.as_array() - PITCH * np.array(N_HALF)
+    origin = start - PITCH * np.array(N_HALF)
     margins = np.full(shape, -np.inf)
     joints = np.full((*shape, bench.hand.n_joints), np.nan)
     seen = np.zeros(shape, dtype=bool)
@@ -95,18 +95,14 @@ def flood(bench: Bench, grasp: Grasp, start: Pose2) -> Reach:
     seen[N_HALF] = True
     while queue:
         node, near = queue.popleft()
-        pose = Pose2.from_array(origin + PITCH * np.array(node))
-        found, left_mm = grasp.joints(bench.hand, pose, 0.0, near)
-        if left_mm > LEFT_MM:
+        hold = bench.hold(grasp, origin + PITCH * np.array(node), near)
+        if hold is None:
             continue
-        margin_mm = bench.margin_at(found, pose)
-        if margin_mm < bench.margin_mm:
-            continue
-        margins[node], joints[node] = margin_mm, found
+        margins[node], joints[node] = hold.margin_mm, hold.joints
         for neighbour in _neighbours(node, shape):
             if not seen[neighbour]:
                 seen[neighbour] = True
-                queue.append((neighbour, found))
+                queue.append((neighbour, hold.joints))
     for array in (origin, margins, joints):
         array.setflags(write=False)
     return Reach(grasp, origin, margins, joints)

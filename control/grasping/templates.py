@@ -12,17 +12,25 @@ from numpy.typing import NDArray
 from control.grasping import contacts
 from control.grasping.contacts import Outline
 from control.grasping.grasp import Grasp, base_bearings
+from control.grasping.placing import PartShape
 from control.model.caging import Ring
 from control.model.contact import Clearances
 from control.model.kinematics import HandModel
-from hw_profiles.geometry import Array, Pose2
+from hw_profiles.geometry import Array
 from hw_profiles.part import Disc, Part
 
 PHASES_RAD = np.radians(np.arange(-90.0, 91.0, 15.0))
 N_NEAREST = {2: 6, 3: 4, 4: 3}  # contacts tried per finger and phase; 2 for hands with more fingers
 MIN_CLOSURE = 0.05
-LEFT_MM = 0.3  # greatest distance that inverse kinematics may leave
-TOUCH_MM = -0.6  # a link other than the contact may graze the part by this much: the fingers are compliant
+LEFT_MM = 0.8  # greatest distance that inverse kinematics may leave
+PLENTY_MM = 6.0  # a cage margin beyond this is worth no more
+N_PROBED = 40
+PROBES = np.array(
+    [
+        *[(dx, dy, 0.0) for dx, dy in ((18, 0), (-18, 0), (0, 18), (0, -18), (35, 0), (-35, 0), (0, 35), (0, -35))],
+        *[(0.0, 0.0, math.radians(turn)) for turn in (-60, -45, -30, -15, 15, 30, 45, 60)],
+    ]
+)
 FINGERS_APART_MM = 1.0
 
 
@@ -32,24 +40,42 @@ class Bench:
 
     hand: HandModel
     part: Part
+    shape: PartShape
     ring: Ring
     clearances: Clearances
     margin_mm: float  # what the cage certificate must show; −inf where no cage is required
 
     @classmethod
     def of(cls, hand: HandModel, part: Part, margin_mm: float) -> Bench:
-        return cls(hand, part, Ring(hand, part), Clearances(hand, part), margin_mm)
+        """Tests for a hand and a part."""
+        return cls(hand, part, PartShape.of(part), Ring(hand, part), Clearances(hand, part), margin_mm)
 
     @property
     def lever_mm(self) -> float:
         """What turns a moment into a force of like size: the part's circumradius."""
         return self.part.circumradius_mm
 
-    def margin_at(self, joints: Array, pose: Pose2) -> float:
-        """Cage margin [mm] of a posture about the part; −inf when a link runs into the part or fingers touch."""
-        if self.clearances.to_part(joints, pose).min() < TOUCH_MM or self.clearances.between_fingers(joints) < FINGERS_APART_MM:
-            return -math.inf
-        return self.ring.certify(joints, pose.as_array()).margin_mm
+    def hold(self, grasp: Grasp, ring: Array, near: Array) -> Hold | None:
+        """The grasp touching at a ring pose (3,), if its fingers reach, keep apart, close on the part and cage it as asked."""
+        joints, left_mm, touch = grasp.touching(self.hand, self.shape, ring, 0.0, near)
+        if left_mm > LEFT_MM or self.clearances.between_fingers(joints) < FINGERS_APART_MM:
+            return None
+        margin_mm = self.ring.certify(joints, ring).margin_mm
+        if margin_mm < self.margin_mm:
+            return None
+        quality = 1.0
+        if not self.hand.is_jaw.all():  # flat jaws take moments that point contacts do not
+            quality = contacts.closure(touch[:, :2], touch[:, 2:4], self.part.friction, self.lever_mm)
+        return Hold(joints, margin_mm, quality) if quality > MIN_CLOSURE else None
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Hold:
+    """A grasp in place: joints (n_joints,), cage margin [mm], closure ε of the contacts as they are."""
+
+    joints: Array
+    margin_mm: float
+    closure: float
 
 
 def candidates(bench: Bench, part_yaw_rad: float) -> list[Grasp]:
@@ -94,29 +120,31 @@ def _jaw_candidates(bench: Bench) -> list[Grasp]:
     return grasps
 
 
-def best_at(bench: Bench, part_yaw_rad: float, n_tried: int = 60) -> tuple[Grasp, float] | None:
-    """The grasp for the part at the palm centre turned by `part_yaw_rad` that promises most, and its cage margin [mm]."""
-    pose = Pose2(0.0, 0.0, part_yaw_rad)
-    best: tuple[Grasp, float] | None = None
-    best_score = 0.0
-    for grasp in _spread(candidates(bench, part_yaw_rad), n_tried):
-        joints, left_mm = grasp.joints(bench.hand, pose, 0.0, bench.hand.home)
-        if left_mm > LEFT_MM:
-            continue
-        margin_mm = bench.margin_at(joints, pose)
-        if margin_mm < bench.margin_mm:
-            continue
-        score = grasp.closure * (1.0 + min(max(margin_mm, 0.0), 8.0)) * _joint_room(bench.hand, joints)
+def best_at(bench: Bench, part_yaw_rad: float) -> Grasp | None:
+    """The grasp for the part near the palm centre, turned by `part_yaw_rad`, that promises the widest reach.
+
+    Those that hold best at the centre are probed around it: moved a little and turned a little each way.
+    """
+    centre = np.array([0.0, 0.0, part_yaw_rad])
+    held = []
+    for grasp in candidates(bench, part_yaw_rad):
+        hold = bench.hold(grasp, centre, bench.hand.home)
+        if hold is not None:
+            held.append((_worth(bench, hold), grasp, hold))
+    held.sort(key=lambda entry: -entry[0])
+    best, best_score = None, 0.0
+    for _, grasp, hold in held[:: max(1, len(held) // (4 * N_PROBED))][:N_PROBED]:
+        probes = [bench.hold(grasp, centre + probe, hold.joints) for probe in PROBES]
+        score = sum(1.0 + _worth(bench, probe) for probe in probes if probe is not None)
         if score > best_score:
-            best, best_score = (grasp, margin_mm), score
+            best, best_score = grasp, score
     return best
 
 
-def _spread(grasps: list[Grasp], n: int) -> list[Grasp]:
-    """At most n of the list, evenly over its ranks."""
-    if len(grasps) <= n:
-        return grasps
-    return [grasps[k] for k in np.linspace(0, len(grasps) - 1, n).astype(int)]
+def _worth(bench: Bench, hold: Hold) -> float:
+    """How good a hold is: closure, cage margin up to what is plenty, and room in the joints."""
+    margin = 1.0 if bench.margin_mm == -math.inf else min(hold.margin_mm, PLENTY_MM) / PLENTY_MM
+    return hold.closure * margin * (0.2 + _joint_room(bench.hand, hold.joints))
 
 
 def _joint_room(hand: HandModel, joints: Array) -> float:

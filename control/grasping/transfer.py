@@ -8,13 +8,13 @@ from dataclasses import dataclass
 import numpy as np
 
 from control.grasping.grasp import Grasp
-from control.grasping.templates import LEFT_MM, Bench
-from control.model.kinematics import contact_centres, link_yaws, place_contacts
+from control.grasping.placing import place
+from control.grasping.templates import FINGERS_APART_MM, LEFT_MM, Bench
+from control.model.kinematics import contact_centres, link_yaws
 from hw_profiles.geometry import Array, Pose2
 
 STEP_MM = 2.0  # between checked postures
-CLEAR_MM = 0.5  # least distance to the part while moving around it
-FINGERS_APART_MM = 1.0
+PATH_MARGIN_MM = 1.0  # least cage margin on the way, where a cage is required
 STAND_OFFS_MM = (1.5, 3.0, 6.0, 10.0)  # tried in this order: the least opening that works
 
 
@@ -82,63 +82,62 @@ def _try(
             return None
         _append(postures, times, opened, speeds.closing_mm_per_s * 2.0, bench)
     grasp, ring = wanted
-    around = _around(bench, postures[-1], grasp, ring, part_pose, stand_off_mm)
-    if around is None:
-        return None
-    _append(postures, times, around, speeds.free_mm_per_s, bench)
-    n_free = len(postures)
-    closed = _shift(bench, grasp, ring, postures[-1], np.linspace(stand_off_mm, -squeeze_mm, math.ceil(stand_off_mm + squeeze_mm) + 1)[1:])
+    steps_mm = np.linspace(stand_off_mm, -squeeze_mm, math.ceil(stand_off_mm + squeeze_mm) + 1)
+    closed = _shift(bench, grasp, ring, postures[-1], steps_mm)
     if closed is None:
         return None
-    _append(postures, times, closed, speeds.closing_mm_per_s, bench)
-    margin_mm = _least_margin(bench, postures, n_free, part_pose)
-    if margin_mm < bench.margin_mm:
+    around = _around(bench, postures[-1], closed[0], part_pose, stand_off_mm)
+    if around is None:
         return None
-    return Path(np.array(times), np.array(postures), margin_mm)
+    n_held = len(postures)
+    _append(postures, times, around, speeds.free_mm_per_s, bench)
+    n_free = len(postures)
+    _append(postures, times, closed, speeds.closing_mm_per_s, bench)
+    if not _is_clear(bench, postures, n_held, n_free, part_pose, 0.3 * stand_off_mm):
+        return None
+    margin_mm = min(bench.ring.certify(joints, part_pose.as_array()).margin_mm for joints in postures)
+    return Path(np.array(times), np.array(postures), margin_mm) if margin_mm >= min(bench.margin_mm, PATH_MARGIN_MM) else None
 
 
 def _shift(bench: Bench, grasp: Grasp, ring: Array, near: Array, clearances_mm: Array) -> list[Array] | None:
     """Postures of a grasp at one clearance after the other."""
     postures = []
     for clearance_mm in clearances_mm:
-        near, left_mm = grasp.joints(bench.hand, Pose2.from_array(ring), float(clearance_mm), near)
-        if left_mm > LEFT_MM and clearance_mm > 0.0:
+        near, left_mm = grasp.joints(bench.hand, bench.shape, ring, float(clearance_mm), near)
+        if left_mm > LEFT_MM:
             return None
         postures.append(near)
     return postures
 
 
-def _around(bench: Bench, start: Array, grasp: Grasp, ring: Array, part_pose: Pose2, stand_off_mm: float) -> list[Array] | None:
-    """Postures from `start` to the grasp at its stand-off; each contact runs about the part's centre, bearing and radius together."""
-    centres, yaws = grasp.placement(bench.hand, Pose2.from_array(ring), stand_off_mm)
-    begin = contact_centres(bench.hand, start) - part_pose.xy_mm
-    end = centres - part_pose.xy_mm
-    from_radius, to_radius = np.linalg.norm(begin, axis=1), np.linalg.norm(end, axis=1)
+def _around(bench: Bench, start: Array, end: Array, part_pose: Pose2, stand_off_mm: float) -> list[Array] | None:
+    """Postures from `start` to `end`: each contact runs about the part, bearing and radius together, no nearer than the stand-off."""
+    hand, pose = bench.hand, part_pose.as_array()
+    hand_from_part_inverse = part_pose.inverse()
+    begin = hand_from_part_inverse.apply(contact_centres(hand, start))
+    finish = hand_from_part_inverse.apply(contact_centres(hand, end))
+    from_radius, to_radius = np.linalg.norm(begin, axis=1), np.linalg.norm(finish, axis=1)
     from_bearing = np.arctan2(begin[:, 1], begin[:, 0])
-    turn = np.arctan2(end[:, 1], end[:, 0]) - from_bearing
-    turn = np.angle(np.exp(1j * turn))
-    start_yaws = _link_yaws(bench, start)
-    yaw_turn = np.where(np.isnan(yaws), np.nan, np.angle(np.exp(1j * (np.nan_to_num(yaws) - start_yaws))))
+    turn = np.angle(np.exp(1j * (np.arctan2(finish[:, 1], finish[:, 0]) - from_bearing)))
+    from_yaw, to_yaw = _last_link_yaws(bench, start), _last_link_yaws(bench, end)
+    yaw_turn = np.where(hand.is_jaw, np.angle(np.exp(1j * (to_yaw - from_yaw))), np.nan)
     distance = np.abs(turn) * np.maximum(from_radius, to_radius) + np.abs(to_radius - from_radius)
-    swing = np.abs(turn) * bench.part.circumradius_mm
-    keep_off = bench.part.circumradius_mm + bench.hand.contact_radius_mm + 1.0
     postures: list[Array] = []
     near = start
-    n_steps = max(1, math.ceil(float(distance.max()) / STEP_MM))
-    for s in np.linspace(0.0, 1.0, n_steps + 1)[1:]:
-        radius = from_radius + s * (to_radius - from_radius)
-        bulge = np.minimum(1.0, 4.0 * min(s, 1.0 - s)) * np.clip(swing / 10.0, 0.0, 1.0)
-        radius = radius + bulge * np.maximum(keep_off - radius, 0.0)
+    for s in np.linspace(0.0, 1.0, max(1, math.ceil(float(distance.max()) / STEP_MM)) + 1)[1:]:
         bearing = from_bearing + s * turn
-        contact = part_pose.xy_mm + radius[:, None] * np.stack([np.cos(bearing), np.sin(bearing)], axis=1)
-        near, left_mm = place_contacts(bench.hand, contact, start_yaws + s * yaw_turn, near)
-        if left_mm.max() > 10.0 * LEFT_MM:
+        rays = np.stack([np.cos(bearing), np.sin(bearing)], axis=1)
+        radius = from_radius + s * (to_radius - from_radius)
+        contacts = rays * (radius - hand.contact_radius_mm - stand_off_mm)[:, None]
+        turns = from_yaw + s * yaw_turn - bearing - part_pose.yaw_rad
+        near, left_mm, _ = place(hand, bench.shape, contacts, rays, turns, pose, stand_off_mm, near)
+        if left_mm > 5.0 * LEFT_MM:
             return None
         postures.append(near)
     return postures
 
 
-def _link_yaws(bench: Bench, joints: Array) -> Array:
+def _last_link_yaws(bench: Bench, joints: Array) -> Array:
     return link_yaws(bench.hand, joints)[bench.hand.first[1:] - 1]
 
 
@@ -152,14 +151,11 @@ def _append(postures: list[Array], times: list[float], more: list[Array], speed_
         postures.append(posture)
 
 
-def _least_margin(bench: Bench, postures: list[Array], n_free: int, part_pose: Pose2) -> float:
-    """Least cage margin along a path; −inf where a finger runs into the part before it may, or into another finger."""
-    least = math.inf
+def _is_clear(bench: Bench, postures: list[Array], n_held: int, n_free: int, part_pose: Pose2, clear_mm: float) -> bool:
+    """Whether the fingers keep apart, and off the part while they move around it."""
     for index, joints in enumerate(postures):
-        is_moving_free = 3 <= index < n_free
-        if is_moving_free and bench.clearances.to_part(joints, part_pose).min() < CLEAR_MM:
-            return -math.inf
         if bench.clearances.between_fingers(joints) < FINGERS_APART_MM:
-            return -math.inf
-        least = min(least, bench.ring.certify(joints, part_pose.as_array()).margin_mm)
-    return least
+            return False
+        if n_held <= index < n_free and bench.clearances.to_part(joints, part_pose).min() < clear_mm:
+            return False
+    return True

@@ -140,7 +140,7 @@ class HandModel:
 
 def centre_lines(model: HandModel, joints: Array) -> Array:
     """Link ends of every finger: (n_fingers, 4, 2) [mm], base first; shorter fingers repeat their tip."""
-    lines: Array = _centre_lines(model.base_mm, model.base_yaw_rad, model.first, model.is_slide, model.link_mm, joints)
+    lines: Array = centre_lines_kernel(model.base_mm, model.base_yaw_rad, model.first, model.is_slide, model.link_mm, joints)
     return lines
 
 
@@ -230,7 +230,7 @@ def place_contacts(model: HandModel, centres_mm: Array, yaws_rad: Array, near: A
 
 
 @njit(cache=True)
-def _centre_lines(base_mm, base_yaw_rad, first, is_slide, link_mm, joints):  # type: ignore[no-untyped-def]
+def centre_lines_kernel(base_mm, base_yaw_rad, first, is_slide, link_mm, joints):  # type: ignore[no-untyped-def]
     n_fingers = base_mm.shape[0]
     lines = np.empty((n_fingers, MAX_LINKS + 1, 2))
     for f in range(n_fingers):

@@ -124,7 +124,7 @@ def _blended(controller: Controller, memory: Memory, reach_index: int, ring: Arr
     """The blend of primitives that comes closest to the pressed grasp at a ring pose."""
     reach = controller.library.reaches[reach_index]
     near = controller.hand.home if memory.joints is None else memory.joints
-    wanted, _ = reach.grasp.joints(controller.hand, Pose2.from_array(ring), -controller.rig.motion.squeeze_mm, near)
+    wanted, _ = reach.grasp.joints(controller.hand, controller.library.bench.shape, ring, -controller.rig.motion.squeeze_mm, near)
     primitives = controller.library.primitives(reach_index, reach.cell(ring))
     weights = blend_weights(primitives.joints, wanted, controller.joint_scale)
     used = tuple((primitives.names[k], float(weights[k])) for k in np.flatnonzero(weights > 1e-6))
