@@ -70,7 +70,7 @@ def options_toward(library: Library, part: Array, guide: Array, held: Carry | No
 
 def _promise(library: Library, option: Option, part: Array, guide: Array) -> float:
     reach = library.reaches[option.reach_index]
-    wanted = option.ring + (guide - part) / ROLL
+    wanted = option.ring + np.where(np.isnan(guide), 0.0, guide - part) / ROLL
     if way_is_held(reach, option.ring, wanted):
         return 1000.0 + min(reach.cell_margin_mm(wanted), option.margin_mm, 10.0) + 0.1 * _room(reach, wanted)
     turned = np.array([option.ring[0], option.ring[1], wanted[2]])
