@@ -24,7 +24,9 @@ from vision.frames import Pixels
 SAMPLES_PER_CELL_EDGE = 2
 TAP_PX = 0.5
 MAX_TAPS = 33
+N_ROUNDS = 10
 INLIER_PX = 0.45  # an edge this close to where the pose puts it agrees with the pose
+MIN_AGREEING = 14
 MIN_CONTRAST = 12.0  # grey levels across an edge, below which it is noise
 EDGE_SD_PX = 0.02  # floor of the edge noise: interpolation, printing
 
@@ -80,30 +82,20 @@ class EdgeTemplate:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class EdgeFit:
-    """What the edges say.
+    """Where the edges put the part.
 
     Attributes
     ----------
     pose : hand_from_part.
     covariance : (3, 3) mm², mm·rad, rad²; from the residuals of the edges that agree.
-    agreeing_x, agreeing_y : share of the edges across the tag's x and y axis that agree with the pose.
-    cells_right : share of the 64 cells seen with the brightness they should have.
-    cells_shifted : the same share at the best of the eight poses one cell aside.
-    contrast : grey levels between white and black at the tag's edges.
-    blur_px : standard deviation of the edge spread.
     residual_px : root mean square offset of the edges that agree.
+    samples : (n, 6) u, v, offset along the normal [px], contrast [grey levels], variance of the spread [px²], agrees (1 or 0).
     """
 
     pose: Pose2
     covariance: Array
-    agreeing_x: float
-    agreeing_y: float
-    cells_right: float
-    cells_shifted: float
-    contrast: float
-    blur_px: float
     residual_px: float
-    samples: Array  # (n, 6) u, v, offset [px], contrast, spread [px], agrees: for the tilt check and for drawing
+    samples: Array
 
 
 def fit(model: CameraModel, grey: Pixels, corner_px: tuple[int, int], template: EdgeTemplate, z_mm: float, start: Pose2) -> EdgeFit | None:
@@ -115,72 +107,14 @@ def fit(model: CameraModel, grey: Pixels, corner_px: tuple[int, int], template: 
     z_mm : height of the tag in the hand frame.
     start : within about 0.4 cells and 10° of the truth.
     """
-    scale = model.px_per_mm(start.apply(template.centres.mean(axis=0)), z_mm)
-    cell_px = template.cell_mm * scale
     samples = np.empty((len(template.points), 6))
-    pose, normal_matrix, residual, n_agreeing = _gauss_newton(
-        grey,
-        corner_px[0],
-        corner_px[1],
-        model.lens,
-        model.motion,
-        z_mm,
-        template.points,
-        template.normals,
-        cell_px,
-        start.as_array(),
-        samples,
-    )
-    if n_agreeing < 12 or not np.isfinite(pose).all() or np.linalg.cond(normal_matrix) > 1e9:
+    pose, covariance, residual, n_agreeing = _gauss_newton(
+        grey, corner_px[0], corner_px[1], model.lens, model.motion, z_mm, template.points, template.normals, template.cell_mm,
+        start.as_array(), samples,
+    )  # fmt: skip
+    if n_agreeing < MIN_AGREEING:
         return None
-    agrees = samples[:, 5] > 0.0
-    good = samples[agrees]
-    fitted = Pose2.from_array(pose)
-    right, shifted, contrast = _judge_cells(model, grey, corner_px, template, z_mm, fitted, good)
-    sd = max(residual, EDGE_SD_PX)
-    spread = float(np.sqrt(max(np.median(good[:, 4]), 0.0)))
-    return EdgeFit(
-        fitted,
-        np.linalg.inv(normal_matrix) * sd * sd,
-        float(agrees[template.is_column].mean()),
-        float(agrees[~template.is_column].mean()),
-        right,
-        shifted,
-        contrast,
-        spread,
-        residual,
-        samples,
-    )
-
-
-def _judge_cells(
-    model: CameraModel, grey: Pixels, corner_px: tuple[int, int], template: EdgeTemplate, z_mm: float, pose: Pose2, good: Array
-) -> tuple[float, float, float]:
-    """Shares of cells with the right brightness here and one cell aside, against a level plane through the good edges' middles."""
-    contrast = float(np.median(good[:, 3]))
-    middle = _bilinear_all(grey, good[:, 0] - corner_px[0], good[:, 1] - corner_px[1])
-    origin = good[:, :2].mean(axis=0)
-    design = np.concatenate([np.ones((len(good), 1)), good[:, :2] - origin], axis=1)
-    level = np.linalg.solve(design.T @ design + np.diag([1e-6, 50.0, 50.0]), design.T @ middle)
-    threshold = 0.2 * contrast
-    steps = [(0.0, 0.0)] + [(i, j) for i in (-1.0, 0.0, 1.0) for j in (-1.0, 0.0, 1.0) if (i, j) != (0.0, 0.0)]
-    turn = template.cell_mm * np.array(steps)
-    shares = _cell_shares(
-        grey,
-        corner_px[0],
-        corner_px[1],
-        model.lens,
-        model.motion,
-        z_mm,
-        template.centres,
-        template.white,
-        turn,
-        pose.as_array(),
-        level,
-        origin,
-        threshold,
-    )
-    return float(shares[0]), float(shares[1:].max()), contrast
+    return EdgeFit(Pose2.from_array(pose), covariance, float(residual), samples)
 
 
 @njit(cache=True)
@@ -192,14 +126,6 @@ def bilinear(grey: Pixels, u: float, v: float) -> float:
     a, b = u - j, v - i
     top = grey[i, j] * (1.0 - a) + grey[i, j + 1] * a
     return float(top * (1.0 - b) + (grey[i + 1, j] * (1.0 - a) + grey[i + 1, j + 1] * a) * b)
-
-
-@njit(cache=True)
-def _bilinear_all(grey: Pixels, u: Array, v: Array) -> Array:
-    values = np.empty(u.shape[0])
-    for i in range(u.shape[0]):
-        values[i] = bilinear(grey, u[i], v[i])
-    return values
 
 
 @njit(cache=True)
@@ -236,101 +162,84 @@ def _gauss_newton(
     z_mm: float,
     points: Array,
     normals: Array,
-    cell_px: float,
+    cell_mm: float,
     start: Array,
     samples: Array,
 ) -> tuple[Array, Array, float, int]:
-    """Pose (3,), normal matrix (3, 3), RMS of agreeing edges [px] and their number; fills samples (n, 6)."""
+    """Pose (3,), covariance (3, 3), RMS of agreeing edges [px] and their number (0: no pose); fills samples (n, 6)."""
     n = points.shape[0]
     pose = start.copy()
+    _, _, ux, uy, vx, vy = project_with_slope(lens, motion, pose[0], pose[1], z_mm)
+    cell_px = cell_mm * math.sqrt(abs(ux * vy - uy * vx))
     taps, matrix, vector = np.empty(MAX_TAPS), np.empty((3, 3)), np.empty(3)
-    rows = np.empty((n, 3))
+    rows = np.empty((points.shape[0], 3))
     widest, narrowest = min(max(0.48 * cell_px, 1.0), 7.0), min(max(0.36 * cell_px, 1.0), 3.0)
-    residual, n_agreeing = 0.0, 0
-    n_rounds = 9
-    for turn in range(n_rounds):
+    rms, n_agreeing = 0.0, 0
+    for turn in range(N_ROUNDS):
         reach = max(widest * 0.75**turn, narrowest)
         n_side = min(int(reach / TAP_PX + 0.5), (MAX_TAPS - 1) // 2)
         keep_px = max(reach * 0.75**turn, INLIER_PX)
         cos, sin = math.cos(pose[2]), math.sin(pose[2])
-        matrix[:] = 0.0
-        vector[:] = 0.0
-        for i in range(n):
+        for i in range(points.shape[0]):
             dx, dy = cos * points[i, 0] - sin * points[i, 1], sin * points[i, 0] + cos * points[i, 1]
             nx, ny = cos * normals[i, 0] - sin * normals[i, 1], sin * normals[i, 0] + cos * normals[i, 1]
-            u, v, ux, uy, vx, vy = project_with_slope(lens, motion, pose[0] + dx, pose[1] + dy, z_mm)
-            tu, tv = -ux * ny + uy * nx, -vx * ny + vy * nx  # the edge's direction in the image
-            size = math.sqrt(tu * tu + tv * tv)
-            nu, nv = tv / size, -tu / size
-            if nu * (ux * nx + uy * ny) + nv * (vx * nx + vy * ny) < 0.0:
-                nu, nv = -nu, -nv
-            offset, contrast, spread = _read_edge(grey, u - u_0, v - v_0, nu, nv, n_side, taps)
-            samples[i, 0], samples[i, 1], samples[i, 2], samples[i, 3], samples[i, 4] = u, v, offset, contrast, spread
-            rows[i, 0], rows[i, 1] = nu * ux + nv * vx, nu * uy + nv * vy
+            u, v, nu, nv, rows[i, 0], rows[i, 1] = edge_in_image(lens, motion, pose[0] + dx, pose[1] + dy, z_mm, nx, ny)
             rows[i, 2] = -rows[i, 0] * dy + rows[i, 1] * dx
-            samples[i, 5] = 1.0 if contrast > 0.0 else 0.0
-        usual = _median_where(samples[:, 3], samples[:, 5])
-        residual, n_agreeing = 0.0, 0
-        for i in range(n):
-            offset = samples[i, 2]
-            if samples[i, 3] < 0.4 * usual or abs(offset) >= keep_px:
-                samples[i, 5] = 0.0
-            if samples[i, 5] == 0.0:
-                continue
-            weight = (1.0 - (offset / keep_px) ** 2) ** 2  # Tukey's biweight
-            for a in range(3):
-                vector[a] += weight * rows[i, a] * offset
-                for b in range(3):
-                    matrix[a, b] += weight * rows[i, a] * rows[i, b]
-            if abs(offset) < INLIER_PX:
-                residual += offset * offset
-                n_agreeing += 1
-            else:
-                samples[i, 5] = 0.0
-        if (n_agreeing < 8 and turn > 3) or abs(np.linalg.det(matrix)) < 1e-9:
+            samples[i, 0], samples[i, 1] = u, v
+            samples[i, 2], samples[i, 3], samples[i, 4] = _read_edge(grey, u - u_0, v - v_0, nu, nv, n_side, taps)
+        rms, n_agreeing = _normal_equations(samples, rows, keep_px, matrix, vector)
+        if (n_agreeing < MIN_AGREEING and turn > 3) or abs(np.linalg.det(matrix)) < 1e-6:
             return pose, matrix, 0.0, 0
-        if turn == n_rounds - 1:
+        if turn == N_ROUNDS - 1:
             break
         step = np.linalg.solve(matrix, vector)
         pose += step
-        if turn >= 4 and abs(step[0]) + abs(step[1]) < 2e-5 and abs(step[2]) < 4e-6 and keep_px == INLIER_PX and reach == narrowest:
+        if keep_px == INLIER_PX and reach == narrowest and abs(step[0]) + abs(step[1]) < 1e-4 and abs(step[2]) < 1e-5:
             break
-    return pose, matrix, math.sqrt(residual / max(n_agreeing, 1)), n_agreeing
+    return pose, np.linalg.inv(matrix) * max(rms, EDGE_SD_PX) ** 2, rms, n_agreeing
 
 
 @njit(cache=True)
-def _median_where(values: Array, keep: Array) -> float:
+def edge_in_image(
+    lens: Array, motion: Array, x: float, y: float, z: float, nx: float, ny: float
+) -> tuple[float, float, float, float, float, float]:
+    """An edge point with normal (nx, ny) of the hand plane: its pixel, unit normal in the image, and d offset / d(x, y) [px/mm]."""
+    u, v, ux, uy, vx, vy = project_with_slope(lens, motion, x, y, z)
+    tu, tv = -ux * ny + uy * nx, -vx * ny + vy * nx  # the edge's direction in the image
+    size = math.sqrt(tu * tu + tv * tv)
+    nu, nv = tv / size, -tu / size
+    if nu * (ux * nx + uy * ny) + nv * (vx * nx + vy * ny) < 0.0:
+        nu, nv = -nu, -nv
+    return u, v, nu, nv, nu * ux + nv * vx, nu * uy + nv * vy
+
+
+@njit(cache=True)
+def _normal_equations(samples: Array, rows: Array, keep_px: float, matrix: Array, vector: Array) -> tuple[float, int]:
+    """Fills JᵀWJ and JᵀWr with Tukey's weights, and marks the edges that agree; returns their RMS and number."""
+    n = samples.shape[0]
+    matrix[:] = 0.0
+    vector[:] = 0.0
+    usual = median_where(samples[:, 3], samples[:, 3])
+    squares, n_agreeing = 0.0, 0
+    for i in range(n):
+        offset = samples[i, 2]
+        samples[i, 5] = 0.0
+        if samples[i, 3] <= 0.0 or samples[i, 3] < 0.4 * usual or abs(offset) >= keep_px:
+            continue
+        weight = (1.0 - (offset / keep_px) ** 2) ** 2
+        for a in range(3):
+            vector[a] += weight * rows[i, a] * offset
+            for b in range(3):
+                matrix[a, b] += weight * rows[i, a] * rows[i, b]
+        if abs(offset) < INLIER_PX:
+            squares += offset * offset
+            n_agreeing += 1
+            samples[i, 5] = 1.0
+    return math.sqrt(squares / max(n_agreeing, 1)), n_agreeing
+
+
+@njit(cache=True)
+def median_where(values: Array, keep: Array) -> float:
+    """Median of the values whose `keep` is positive; 0 of none."""
     kept = values[keep > 0.0]
     return float(np.median(kept)) if kept.shape[0] > 0 else 0.0
-
-
-@njit(cache=True)
-def _cell_shares(
-    grey: Pixels,
-    u_0: int,
-    v_0: int,
-    lens: Array,
-    motion: Array,
-    z_mm: float,
-    centres: Array,
-    white: NDArray[np.bool_],
-    shifts: Array,
-    pose: Array,
-    level: Array,
-    origin: Array,
-    threshold: float,
-) -> Array:
-    """Share of cells of the right brightness with the tag moved by each shift (n, 2) [mm, hand axes turned with the part]."""
-    shares = np.empty(shifts.shape[0])
-    cos, sin = math.cos(pose[2]), math.sin(pose[2])
-    for k in range(shifts.shape[0]):
-        right = 0
-        for i in range(centres.shape[0]):
-            x, y = centres[i, 0] + shifts[k, 0], centres[i, 1] + shifts[k, 1]
-            u, v, _, _, _, _ = project_with_slope(lens, motion, pose[0] + cos * x - sin * y, pose[1] + sin * x + cos * y, z_mm)
-            value = bilinear(grey, u - u_0, v - v_0)
-            beyond = value - level[0] - level[1] * (u - origin[0]) - level[2] * (v - origin[1])
-            if value >= 0.0 and (beyond > threshold if white[i] else beyond < -threshold):
-                right += 1
-        shares[k] = right / centres.shape[0]
-    return shares

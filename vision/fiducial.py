@@ -44,8 +44,8 @@ class Finder:
         small = pixels
         if shrink > 1:
             size = (pixels.shape[1] // shrink, pixels.shape[0] // shrink)
-            small = cv2.resize(pixels[: size[1] * shrink, : size[0] * shrink], size, interpolation=cv2.INTER_AREA)
-        grey = small if small.ndim == 2 else cv2.cvtColor(small, cv2.COLOR_BGR2GRAY)
+            small = np.asarray(cv2.resize(pixels[: size[1] * shrink, : size[0] * shrink], size, interpolation=cv2.INTER_AREA), np.uint8)
+        grey = np.asarray(small if small.ndim == 2 else cv2.cvtColor(small, cv2.COLOR_BGR2GRAY), np.uint8)
         corners, ids, _ = self._detector(grey, shrink).detectMarkers(grey)
         if ids is None:
             return []

@@ -1,0 +1,143 @@
+"""One tagged part being followed from frame to frame.
+
+Predict where it is and fit its cell edges there; where that fails, search the surroundings by the pattern of the cells and fit again;
+where that fails, decode the tag in a cut-out. A fit must pass every check of `fault`, and the filter's gate unless it was decoded.
+"""
+
+from __future__ import annotations
+
+import math
+
+import cv2
+import numpy as np
+
+from hw_profiles.geometry import Array, Pose2
+from hw_profiles.observation import NoPose, PartPose
+from hw_profiles.part import Part
+from vision import edge_checks, edge_fit, fiducial, pose_filter
+from vision.camera_model import CameraModel
+from vision.edge_checks import Quality
+from vision.edge_fit import EdgeFit, EdgeTemplate
+from vision.fiducial import Finder, Sighting
+from vision.frames import Frame, Pixels
+from vision.pose_filter import Belief
+
+MAX_BLUR_PX = 4.0
+MAX_TILT_RAD = math.radians(6.0)
+COAST_US = 400_000  # a prediction older than this is no place to look
+POSITION_FLOOR_MM, YAW_FLOOR_RAD = 0.004, 0.0004  # standard deviations below which calibration, not noise, decides
+CUT_SIDES = 0.95  # half width of the cut-out, of the tag's side: holds the tag at any angle
+Cut = tuple[Pixels, tuple[int, int]]  # grey pixels and the (u, v) of their first
+
+
+class TagTrack:
+    """Follows one part by its tag; `quality` is of the last fit, None where there was none."""
+
+    def __init__(self, model: CameraModel, part: Part) -> None:
+        self.part, self.quality = part, None
+        self._model = model
+        self._belief: Belief | None = None
+        self._template = EdgeTemplate.of(part.fiducial)
+        self._finder = Finder(model, (part,))
+
+    quality: Quality | None
+
+    def follow(self, frame: Frame) -> PartPose | NoPose:
+        """The pose near where the part was expected."""
+        self.quality = None
+        if self._belief is None or frame.captured_at_us - self._belief.at_us > COAST_US:
+            return NoPose(f"tag {self.part.fiducial.id} is not in view: is it covered, out of the image or too dark?")
+        expected = pose_filter.predict(self._belief, frame.captured_at_us)
+        near = self._near(frame.pixels, expected)
+        sight = near if near is None or isinstance(near, NoPose) else self._accept(expected, *near)
+        if isinstance(sight, PartPose):
+            return sight
+        cut = self._cut(frame.pixels, expected.pose, 2.0)
+        for sighting in self._finder.find(*cut, shrink=1) if cut else ():
+            return self.restart(frame, sighting)
+        return sight or NoPose(f"tag {self.part.fiducial.id} left the image: bring the part back into view")
+
+    def restart(self, frame: Frame, sighting: Sighting) -> PartPose | NoPose:
+        """The pose from a decoded tag, whatever was believed before."""
+        start, misfit_mm = fiducial.rigid_pose(self._model, self.part, sighting.corners_px)
+        tag = self.part.fiducial
+        if misfit_mm > 0.12 * tag.size_mm:
+            return NoPose(
+                f"tag {tag.id} is not {tag.size_mm:g} mm wide at height {self.part.height_mm:g} mm: check the part's profile and calibration"
+            )
+        cut = self._cut(frame.pixels, start)
+        found = None if cut is None else self._fit(cut, start)
+        if found is None or isinstance(found, NoPose):
+            return found or NoPose(f"tag {tag.id} stands at the rim of the image: bring the part back into view")
+        if self._belief is not None and frame.captured_at_us - self._belief.at_us <= COAST_US:
+            expected = pose_filter.predict(self._belief, frame.captured_at_us)
+            if pose_filter.surprise(expected, *found) <= pose_filter.GATE:
+                return self._accept(expected, *found)
+        return self._accept(pose_filter.begin(frame.captured_at_us, *found), *found)
+
+    def _near(self, pixels: Pixels, expected: Belief) -> tuple[Pose2, Array] | NoPose | None:
+        """Pose and covariance by a fit at the expected pose, else at the best place around it; gated. None: outside the image."""
+        cut = self._cut(pixels, expected.pose)
+        if cut is None:
+            return None
+        found = self._fit(cut, expected.pose)
+        if isinstance(found, NoPose):
+            wide = self._cut(pixels, expected.pose, 1.3) or cut
+            start = edge_checks.search(
+                self._model, *wide, self._template, self.part.height_mm, expected.pose, 1.5 * self._template.cell_mm, math.radians(12.0)
+            )
+            again = self._fit(wide, start)
+            found = found if isinstance(again, NoPose) else again
+        if not isinstance(found, NoPose) and pose_filter.surprise(expected, *found) > pose_filter.GATE:
+            return NoPose(f"tag {self.part.fiducial.id} jumped farther than the part can move in a frame: is something else moving it?")
+        return found
+
+    def _fit(self, cut: Cut, start: Pose2) -> tuple[Pose2, Array] | NoPose:
+        tag, height = self.part.fiducial, self.part.height_mm
+        found = edge_fit.fit(self._model, *cut, self._template, height, start)
+        if found is None:
+            return NoPose(f"tag {tag.id} shows no edges where it was expected: is it covered, out of the image or too dark?")
+        self.quality = edge_checks.judge(self._model, *cut, self._template, height, found)
+        wrong = fault(found, self.quality)
+        if wrong is not None:
+            return NoPose(f"tag {tag.id} {wrong}")
+        return found.pose, found.covariance + np.diag([POSITION_FLOOR_MM**2, POSITION_FLOOR_MM**2, YAW_FLOOR_RAD**2])
+
+    def _cut(self, pixels: Pixels, pose: Pose2, sides: float = CUT_SIDES) -> Cut | None:
+        """Grey cut-out around the tag; None where the tag is outside the image."""
+        tag = self.part.fiducial
+        middle = pose.apply([tag.x_mm, tag.y_mm])
+        u, v = self._model.project_plane(middle, self.part.height_mm)
+        reach = tag.size_mm * self._model.px_per_mm(middle, self.part.height_mm) * sides + 8.0
+        rows, columns = pixels.shape[:2]
+        if not (math.isfinite(u + v) and -reach < u < columns + reach and -reach < v < rows + reach):
+            return None
+        u_0, v_0 = max(int(u - reach), 0), max(int(v - reach), 0)
+        cut = pixels[v_0 : int(v + reach) + 1, u_0 : int(u + reach) + 1]
+        if min(cut.shape[:2]) < 8:
+            return None
+        grey = np.ascontiguousarray(cut if cut.ndim == 2 else cv2.cvtColor(cut, cv2.COLOR_BGR2GRAY), dtype=np.uint8)
+        return grey, (u_0, v_0)
+
+    def _accept(self, expected: Belief, pose: Pose2, covariance: Array) -> PartPose:
+        self._belief = pose_filter.update(expected, pose, covariance)
+        return PartPose(pose, self._belief.pose, self._belief.twist, covariance)
+
+
+def fault(found: EdgeFit, quality: Quality) -> str | None:
+    """Why a fit must not be believed; None when it may."""
+    if quality.blur_px > MAX_BLUR_PX:
+        return f"is blurred over {quality.blur_px:.1f} px: shorten the exposure or slow down"
+    if quality.saturated > 0.5:
+        return f"has {quality.saturated:.0%} of its white cells at the sensor's limit: shorten the exposure or dim the light"
+    if min(quality.agreeing_x, quality.agreeing_y) < 0.3:
+        return "shows too few of its edges: is it covered, blurred or too dark?"
+    if quality.cells_right < 0.55 or quality.cells_right < quality.cells_aside + 0.12:
+        return "does not look as it should: is it covered, damaged or badly lit?"
+    sd_mm = math.sqrt(max(found.covariance[0, 0], found.covariance[1, 1]))
+    sd_rad = math.sqrt(found.covariance[2, 2])
+    if sd_mm > 0.1 or sd_rad > math.radians(0.5):
+        return f"is only placed to {sd_mm:.2f} mm, {math.degrees(sd_rad):.2f} deg: is it covered or too small in the image?"
+    if quality.tilt_rad - 4.0 * quality.tilt_sd_rad > MAX_TILT_RAD:
+        return f"stands {math.degrees(quality.tilt_rad):.0f} deg off the plate: the part is tipping, or the camera has moved"
+    return None
