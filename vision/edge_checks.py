@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 
 from hw_profiles.geometry import Array, Pose2
 from vision.camera_model import CameraModel, project_with_slope
-from vision.edge_fit import EDGE_SD_PX, EdgeFit, EdgeTemplate, bilinear, edge_in_image, median_where
+from vision.edge_fit import EDGE_SD_PX, MAX_TAPS, TAP_PX, EdgeFit, EdgeTemplate, bilinear, edge_in_image, median_where, read_edge
 from vision.frames import Pixels
 
 CELL_THRESHOLD = 0.2  # of the contrast, that a cell must stand off the middle grey
@@ -32,7 +32,7 @@ class Quality:
     cells_right : share of the 64 cells with the brightness they should have.
     cells_aside : the same share at the best of the eight poses one cell aside: what chance gives.
     contrast : grey levels between white and black.
-    blur_px : standard deviation of the edge spread, lens and motion together.
+    blur_px, blur_cells : standard deviation of the edge spread, lens and motion together, in pixels and in cells.
     saturated : share of white cells at the sensor's upper end.
     tilt_rad, tilt_sd_rad : angle between the tag and the plate, and its standard deviation (how well this view can tell).
     """
@@ -43,6 +43,7 @@ class Quality:
     cells_aside: float
     contrast: float
     blur_px: float
+    blur_cells: float
     saturated: float
     tilt_rad: float
     tilt_sd_rad: float
@@ -52,19 +53,20 @@ def judge(model: CameraModel, grey: Pixels, corner_px: tuple[int, int], template
     """Look at the tag once more at the pose that was found; parameters as for `edge_fit.fit`."""
     pose = found.pose.as_array()
     place = (grey, corner_px[0], corner_px[1], model.lens, model.motion, z_mm)
-    x, y, contrast, spread, level = _edge_shares(grey, corner_px[0], corner_px[1], found.samples, template.is_column)
+    x, y, contrast, level = _edge_shares(grey, corner_px[0], corner_px[1], found.samples, template.is_column)
+    spread = _rim_spread(*place, template.points, template.normals, template.is_rim, template.cell_mm, pose, found.samples)
     right, aside, saturated = _cell_shares(
         *place, template.centres, template.white, template.cell_mm, pose, level, CELL_THRESHOLD * contrast
     )
     tilt, tilt_sd = _tilt(model.lens, model.motion, z_mm, template.points, template.normals, pose, found.samples, found.residual_px)
-    return Quality(x, y, right, aside, contrast, math.sqrt(max(spread, 0.0)), saturated, tilt, tilt_sd)
+    blur_px = math.sqrt(max(spread, 0.0))
+    blur_cells = blur_px / (template.cell_mm * model.px_per_mm(found.pose.xy_mm, z_mm))
+    return Quality(x, y, right, aside, contrast, blur_px, blur_cells, saturated, tilt, tilt_sd)
 
 
 @njit(cache=True)
-def _edge_shares(
-    grey: Pixels, u_0: int, v_0: int, samples: Array, is_column: NDArray[np.bool_]
-) -> tuple[float, float, float, float, Array]:
-    """Agreeing shares across x and y, median contrast and spread, and the level plane (c, du, dv, u, v) of the edges' middles.
+def _edge_shares(grey: Pixels, u_0: int, v_0: int, samples: Array, is_column: NDArray[np.bool_]) -> tuple[float, float, float, Array]:
+    """Agreeing shares across x and y, median contrast, and the level plane (c, du, dv, u, v) of the edges' middles.
 
     The level follows a light that falls off across the tag: least squares of a plane, its slope held back a little.
     """
@@ -90,8 +92,38 @@ def _edge_shares(
     matrix[2, 2] += 50.0
     plane = np.linalg.solve(matrix, vector)
     level = np.array([plane[0], plane[1], plane[2], origin[0], origin[1]])
-    contrast, spread = median_where(samples[:, 3], samples[:, 5]), median_where(samples[:, 4], samples[:, 5])
-    return agreeing[1] / counts[1], agreeing[0] / counts[0], contrast, spread, level
+    contrast = median_where(samples[:, 3], samples[:, 5])
+    return agreeing[1] / counts[1], agreeing[0] / counts[0], contrast, level
+
+
+@njit(cache=True)
+def _rim_spread(
+    grey: Pixels,
+    u_0: int,
+    v_0: int,
+    lens: Array,
+    motion: Array,
+    z_mm: float,
+    points: Array,
+    normals: Array,
+    is_rim: NDArray[np.bool_],
+    cell_mm: float,
+    pose: Array,
+    samples: Array,
+) -> float:
+    """Median variance [px²] of the edge spread along the rim, read a whole cell to either side."""
+    cos, sin = math.cos(pose[2]), math.sin(pose[2])
+    taps, spreads, seen = np.empty(MAX_TAPS), np.zeros(points.shape[0]), np.zeros(points.shape[0])
+    for i in range(points.shape[0]):
+        if not is_rim[i] or samples[i, 5] == 0.0:
+            continue
+        x, y = pose[0] + cos * points[i, 0] - sin * points[i, 1], pose[1] + sin * points[i, 0] + cos * points[i, 1]
+        nx, ny = cos * normals[i, 0] - sin * normals[i, 1], sin * normals[i, 0] + cos * normals[i, 1]
+        u, v, nu, nv, a, b = edge_in_image(lens, motion, x, y, z_mm, nx, ny)
+        n_side = min(int(cell_mm * math.hypot(a, b) / TAP_PX), (MAX_TAPS - 1) // 2)
+        _, contrast, spreads[i] = read_edge(grey, u - u_0, v - v_0, nu, nv, n_side, taps)
+        seen[i] = contrast
+    return median_where(spreads, seen)
 
 
 @njit(cache=True)
@@ -140,11 +172,11 @@ def _tilt(
 ) -> tuple[float, float]:
     """Tilt of the tag's plane against the plate and its standard deviation [rad].
 
-    One Gauss–Newton step from the flat pose in six parameters: x, y, yaw, height, and the slopes of the height along x and y. The
+    One Gauss–Newton step from the flat pose: x, y, yaw, height, the slopes of the height along x and y, and the bleed of edges. The
     slopes show through the camera's own obliqueness (to first order) and through perspective.
     """
     cos, sin = math.cos(pose[2]), math.sin(pose[2])
-    matrix, vector, row = np.zeros((6, 6)), np.zeros(6), np.empty(6)
+    matrix, vector, row = np.zeros((7, 7)), np.zeros(7), np.ones(7)
     for i in range(points.shape[0]):
         if samples[i, 5] == 0.0:
             continue
@@ -155,11 +187,11 @@ def _tilt(
         row[2] = -row[0] * dy + row[1] * dx
         row[3] = (nu * (u_up - u) + nv * (v_up - v)) / 0.01
         row[4], row[5] = row[3] * dx, row[3] * dy
-        for a in range(6):
+        for a in range(7):
             vector[a] += row[a] * samples[i, 2]
-            for b in range(6):
+            for b in range(7):
                 matrix[a, b] += row[a] * row[b]
-    for a in range(6):
+    for a in range(7):
         matrix[a, a] *= 1.0 + 1e-9
     inverse = np.linalg.inv(matrix)
     solved = inverse @ vector

@@ -3,7 +3,8 @@
 Every boundary between a black and a white cell (the white margin included) is sampled. At each sample the image is read along the
 edge's normal and the edge placed at the centroid of the brightness slope there; at the solution the reading window is centred on
 the edge, so its truncation leaves no bias. The pose minimises the robustly weighted squares of the edges' offsets (Tukey's
-biweight; Gauss–Newton after Lowe, "Fitting Parameterized Three-Dimensional Models to Images", PAMI 1991).
+biweight; Gauss–Newton after Lowe, "Fitting Parameterized Three-Dimensional Models to Images", PAMI 1991). A fourth unknown moves
+all edges alike from white to black: over-exposure and spreading ink do that.
 """
 
 from __future__ import annotations
@@ -39,6 +40,7 @@ class EdgeTemplate:
     ----------
     points, normals : (n, 2) [mm] and unit vectors from black to white; read-only.
     is_column : (n,) whether the edge runs along the tag's y axis, so that it places the tag along x; read-only.
+    is_rim : (n,) whether it is the outer edge of the tag's border, which has a free cell on either side; read-only.
     centres, white : (64, 2) [mm] and (64,) the cells; read-only.
     cell_mm : side of a cell.
     """
@@ -46,6 +48,7 @@ class EdgeTemplate:
     points: Array
     normals: Array
     is_column: NDArray[np.bool_]
+    is_rim: NDArray[np.bool_]
     centres: Array
     white: NDArray[np.bool_]
     cell_mm: float
@@ -72,6 +75,7 @@ class EdgeTemplate:
             placed.apply(np.array(points) * pitch),
             placed.rotate(np.array(normals)),
             np.array(columns),
+            np.abs(np.array(points)).max(axis=1) >= half - 1e-9,
             np.ascontiguousarray(pattern.cell_centres_mm(tag).reshape(-1, 2)),
             np.ascontiguousarray(pattern.cells(tag.id).reshape(-1)),
         )
@@ -129,7 +133,7 @@ def bilinear(grey: Pixels, u: float, v: float) -> float:
 
 
 @njit(cache=True)
-def _read_edge(grey: Pixels, u: float, v: float, nu: float, nv: float, n_side: int, taps: Array) -> tuple[float, float, float]:
+def read_edge(grey: Pixels, u: float, v: float, nu: float, nv: float, n_side: int, taps: Array) -> tuple[float, float, float]:
     """Offset along the normal [px], contrast and variance of the edge through (u, v); contrast 0 where there is none."""
     n = 2 * n_side + 1
     for k in range(n):
@@ -167,12 +171,12 @@ def _gauss_newton(
     samples: Array,
 ) -> tuple[Array, Array, float, int]:
     """Pose (3,), covariance (3, 3), RMS of agreeing edges [px] and their number (0: no pose); fills samples (n, 6)."""
-    n = points.shape[0]
     pose = start.copy()
     _, _, ux, uy, vx, vy = project_with_slope(lens, motion, pose[0], pose[1], z_mm)
     cell_px = cell_mm * math.sqrt(abs(ux * vy - uy * vx))
-    taps, matrix, vector = np.empty(MAX_TAPS), np.empty((3, 3)), np.empty(3)
-    rows = np.empty((points.shape[0], 3))
+    taps, matrix, vector = np.empty(MAX_TAPS), np.empty((4, 4)), np.empty(4)
+    rows = np.ones((points.shape[0], 4))
+    bleed_px = 0.0
     widest, narrowest = min(max(0.48 * cell_px, 1.0), 7.0), min(max(0.36 * cell_px, 1.0), 3.0)
     rms, n_agreeing = 0.0, 0
     for turn in range(N_ROUNDS):
@@ -185,18 +189,21 @@ def _gauss_newton(
             nx, ny = cos * normals[i, 0] - sin * normals[i, 1], sin * normals[i, 0] + cos * normals[i, 1]
             u, v, nu, nv, rows[i, 0], rows[i, 1] = edge_in_image(lens, motion, pose[0] + dx, pose[1] + dy, z_mm, nx, ny)
             rows[i, 2] = -rows[i, 0] * dy + rows[i, 1] * dx
+            u, v = u + bleed_px * nu, v + bleed_px * nv
             samples[i, 0], samples[i, 1] = u, v
-            samples[i, 2], samples[i, 3], samples[i, 4] = _read_edge(grey, u - u_0, v - v_0, nu, nv, n_side, taps)
+            samples[i, 2], samples[i, 3], samples[i, 4] = read_edge(grey, u - u_0, v - v_0, nu, nv, n_side, taps)
         rms, n_agreeing = _normal_equations(samples, rows, keep_px, matrix, vector)
         if (n_agreeing < MIN_AGREEING and turn > 3) or abs(np.linalg.det(matrix)) < 1e-6:
             return pose, matrix, 0.0, 0
         if turn == N_ROUNDS - 1:
             break
         step = np.linalg.solve(matrix, vector)
-        pose += step
+        pose += step[:3]
+        bleed_px += step[3]
         if keep_px == INLIER_PX and reach == narrowest and abs(step[0]) + abs(step[1]) < 1e-4 and abs(step[2]) < 1e-5:
             break
-    return pose, np.linalg.inv(matrix) * max(rms, EDGE_SD_PX) ** 2, rms, n_agreeing
+    covariance = np.linalg.inv(matrix)[:3, :3] * max(rms, EDGE_SD_PX) ** 2
+    return pose, covariance, rms, n_agreeing  # type: ignore[return-value]  # numpy: LinAlg answers any float
 
 
 @njit(cache=True)
@@ -219,6 +226,7 @@ def _normal_equations(samples: Array, rows: Array, keep_px: float, matrix: Array
     n = samples.shape[0]
     matrix[:] = 0.0
     vector[:] = 0.0
+    matrix[3, 3] = 1.0  # a bleed of nothing counts as one edge
     usual = median_where(samples[:, 3], samples[:, 3])
     squares, n_agreeing = 0.0, 0
     for i in range(n):
@@ -227,9 +235,9 @@ def _normal_equations(samples: Array, rows: Array, keep_px: float, matrix: Array
         if samples[i, 3] <= 0.0 or samples[i, 3] < 0.4 * usual or abs(offset) >= keep_px:
             continue
         weight = (1.0 - (offset / keep_px) ** 2) ** 2
-        for a in range(3):
+        for a in range(4):
             vector[a] += weight * rows[i, a] * offset
-            for b in range(3):
+            for b in range(4):
                 matrix[a, b] += weight * rows[i, a] * rows[i, b]
         if abs(offset) < INLIER_PX:
             squares += offset * offset

@@ -22,7 +22,8 @@ from vision.fiducial import Finder, Sighting
 from vision.frames import Frame, Pixels
 from vision.pose_filter import Belief
 
-MAX_BLUR_PX = 4.0
+MAX_BLUR_CELLS = 0.36  # more, and neighbouring edges pull at each other
+SURE_CELLS, SURE_EDGES = 0.72, 0.5  # a tag seen so well needs no prediction to vouch for it
 MAX_TILT_RAD = math.radians(6.0)
 COAST_US = 400_000  # a prediction older than this is no place to look
 POSITION_FLOOR_MM, YAW_FLOOR_RAD = 0.004, 0.0004  # standard deviations below which calibration, not noise, decides
@@ -49,30 +50,26 @@ class TagTrack:
             return NoPose(f"tag {self.part.fiducial.id} is not in view: is it covered, out of the image or too dark?")
         expected = pose_filter.predict(self._belief, frame.captured_at_us)
         near = self._near(frame.pixels, expected)
-        sight = near if near is None or isinstance(near, NoPose) else self._accept(expected, *near)
-        if isinstance(sight, PartPose):
-            return sight
+        if near is not None and not isinstance(near, NoPose):
+            return self._join(expected, *near)
         cut = self._cut(frame.pixels, expected.pose, 2.0)
         for sighting in self._finder.find(*cut, shrink=1) if cut else ():
             return self.restart(frame, sighting)
-        return sight or NoPose(f"tag {self.part.fiducial.id} left the image: bring the part back into view")
+        return near or NoPose(f"tag {self.part.fiducial.id} left the image: bring the part back into view")
 
     def restart(self, frame: Frame, sighting: Sighting) -> PartPose | NoPose:
         """The pose from a decoded tag, whatever was believed before."""
         start, misfit_mm = fiducial.rigid_pose(self._model, self.part, sighting.corners_px)
         tag = self.part.fiducial
         if misfit_mm > 0.12 * tag.size_mm:
-            return NoPose(
-                f"tag {tag.id} is not {tag.size_mm:g} mm wide at height {self.part.height_mm:g} mm: check the part's profile and calibration"
-            )
+            wanted = f"{tag.size_mm:g} mm wide at height {self.part.height_mm:g} mm"
+            return NoPose(f"tag {tag.id} is not {wanted}: check the part's profile and the calibration")
         cut = self._cut(frame.pixels, start)
         found = None if cut is None else self._fit(cut, start)
         if found is None or isinstance(found, NoPose):
             return found or NoPose(f"tag {tag.id} stands at the rim of the image: bring the part back into view")
         if self._belief is not None and frame.captured_at_us - self._belief.at_us <= COAST_US:
-            expected = pose_filter.predict(self._belief, frame.captured_at_us)
-            if pose_filter.surprise(expected, *found) <= pose_filter.GATE:
-                return self._accept(expected, *found)
+            return self._join(pose_filter.predict(self._belief, frame.captured_at_us), *found)
         return self._accept(pose_filter.begin(frame.captured_at_us, *found), *found)
 
     def _near(self, pixels: Pixels, expected: Belief) -> tuple[Pose2, Array] | NoPose | None:
@@ -82,15 +79,27 @@ class TagTrack:
             return None
         found = self._fit(cut, expected.pose)
         if isinstance(found, NoPose):
-            wide = self._cut(pixels, expected.pose, 1.3) or cut
-            start = edge_checks.search(
-                self._model, *wide, self._template, self.part.height_mm, expected.pose, 1.5 * self._template.cell_mm, math.radians(12.0)
-            )
-            again = self._fit(wide, start)
-            found = found if isinstance(again, NoPose) else again
-        if not isinstance(found, NoPose) and pose_filter.surprise(expected, *found) > pose_filter.GATE:
-            return NoPose(f"tag {self.part.fiducial.id} jumped farther than the part can move in a frame: is something else moving it?")
-        return found
+            again = self._search(pixels, expected)
+            found = found if again is None or isinstance(again, NoPose) else again
+        if isinstance(found, NoPose) or pose_filter.surprise(expected, *found) <= pose_filter.GATE or self._is_sure():
+            return found
+        return NoPose(f"tag {self.part.fiducial.id} jumped farther than the part can move in a frame: is something else moving it?")
+
+    def _search(self, pixels: Pixels, expected: Belief) -> tuple[Pose2, Array] | NoPose | None:
+        """A fit from the place where the cells match best, as far around as the prediction is unsure."""
+        cell = self._template.cell_mm
+        sd = np.sqrt(np.diag(expected.covariance))
+        reach_mm, reach_rad = min(max(3.0 * max(sd[0], sd[1]), 1.5 * cell), 4.0 * cell), min(max(3.0 * sd[2], 0.2), 0.6)
+        cut = self._cut(pixels, expected.pose, CUT_SIDES + reach_mm / self.part.fiducial.size_mm)
+        if cut is None:
+            return None
+        return self._fit(
+            cut, edge_checks.search(self._model, *cut, self._template, self.part.height_mm, expected.pose, reach_mm, reach_rad)
+        )
+
+    def _is_sure(self) -> bool:
+        seen = self.quality
+        return seen is not None and seen.cells_right >= SURE_CELLS and min(seen.agreeing_x, seen.agreeing_y) >= SURE_EDGES
 
     def _fit(self, cut: Cut, start: Pose2) -> tuple[Pose2, Array] | NoPose:
         tag, height = self.part.fiducial, self.part.height_mm
@@ -100,8 +109,11 @@ class TagTrack:
         self.quality = edge_checks.judge(self._model, *cut, self._template, height, found)
         wrong = fault(found, self.quality)
         if wrong is not None:
-            return NoPose(f"tag {tag.id} {wrong}")
-        return found.pose, found.covariance + np.diag([POSITION_FLOOR_MM**2, POSITION_FLOOR_MM**2, YAW_FLOOR_RAD**2])
+            glare = "; the picture is overexposed" if self.quality.saturated > 0.5 else ""
+            return NoPose(f"tag {tag.id} {wrong}{glare}")
+        # Neighbouring edges begin to pull, and glare moves edges by different amounts.
+        smear = (1.0 + (self.quality.blur_cells / 0.25) ** 4) * (1.0 + 3.0 * self.quality.saturated)
+        return found.pose, found.covariance * smear + np.diag([POSITION_FLOOR_MM**2, POSITION_FLOOR_MM**2, YAW_FLOOR_RAD**2])
 
     def _cut(self, pixels: Pixels, pose: Pose2, sides: float = CUT_SIDES) -> Cut | None:
         """Grey cut-out around the tag; None where the tag is outside the image."""
@@ -119,6 +131,12 @@ class TagTrack:
         grey = np.ascontiguousarray(cut if cut.ndim == 2 else cv2.cvtColor(cut, cv2.COLOR_BGR2GRAY), dtype=np.uint8)
         return grey, (u_0, v_0)
 
+    def _join(self, expected: Belief, pose: Pose2, covariance: Array) -> PartPose:
+        """Go on from the prediction, or begin anew where it was beside the point."""
+        if pose_filter.surprise(expected, pose, covariance) > pose_filter.GATE:
+            expected = pose_filter.begin(expected.at_us, pose, covariance)
+        return self._accept(expected, pose, covariance)
+
     def _accept(self, expected: Belief, pose: Pose2, covariance: Array) -> PartPose:
         self._belief = pose_filter.update(expected, pose, covariance)
         return PartPose(pose, self._belief.pose, self._belief.twist, covariance)
@@ -126,10 +144,8 @@ class TagTrack:
 
 def fault(found: EdgeFit, quality: Quality) -> str | None:
     """Why a fit must not be believed; None when it may."""
-    if quality.blur_px > MAX_BLUR_PX:
-        return f"is blurred over {quality.blur_px:.1f} px: shorten the exposure or slow down"
-    if quality.saturated > 0.5:
-        return f"has {quality.saturated:.0%} of its white cells at the sensor's limit: shorten the exposure or dim the light"
+    if quality.blur_cells > MAX_BLUR_CELLS:
+        return f"is blurred over {quality.blur_px:.1f} px: shorten the exposure, focus, or slow down"
     if min(quality.agreeing_x, quality.agreeing_y) < 0.3:
         return "shows too few of its edges: is it covered, blurred or too dark?"
     if quality.cells_right < 0.55 or quality.cells_right < quality.cells_aside + 0.12:
