@@ -6,7 +6,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from control.grasping.placing import PartShape, place
+from control.grasping.placing import place
+from control.model.contact import PartShape
 from control.model.kinematics import HandModel
 from hw_profiles.geometry import Array
 

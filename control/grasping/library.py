@@ -9,10 +9,10 @@ from functools import lru_cache
 import numpy as np
 
 from control.grasping.grasp import Grasp, base_bearings
-from control.grasping.placing import PartShape
 from control.grasping.primitives import Primitives, primitives_of
 from control.grasping.reach import PITCH, Node, Reach, flood
 from control.grasping.templates import FINGERS_APART_MM, LEFT_MM, Bench, best_at, needs_one_angle
+from control.model.contact import PartShape
 from control.model.kinematics import HandModel
 from hw_profiles.geometry import Array, Pose2
 from hw_profiles.part import Part

@@ -12,9 +12,8 @@ from numpy.typing import NDArray
 from control.grasping import contacts
 from control.grasping.contacts import Outline
 from control.grasping.grasp import Grasp, base_bearings
-from control.grasping.placing import PartShape
 from control.model.caging import Ring
-from control.model.contact import Clearances
+from control.model.contact import Clearances, PartShape
 from control.model.kinematics import HandModel
 from hw_profiles.geometry import Array
 from hw_profiles.part import Disc, Part
@@ -48,7 +47,7 @@ class Bench:
     @classmethod
     def of(cls, hand: HandModel, part: Part, margin_mm: float) -> Bench:
         """Tests for a hand and a part."""
-        return cls(hand, part, PartShape.of(part), Ring(hand, part), Clearances(hand, part), margin_mm)
+        return cls(hand, part, PartShape.of(part), Ring(hand, part), Clearances(hand, PartShape.of(part)), margin_mm)
 
     @property
     def lever_mm(self) -> float:
