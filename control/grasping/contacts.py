@@ -50,7 +50,8 @@ def tip_contacts(part: Part, tip_radius_mm: float) -> Outline:
 
 
 def _edge_points(outline_mm: Array) -> tuple[Array, Array]:
-    points, normals = [], []
+    points: list[Array] = []
+    normals: list[Array] = []
     for a, b in zip(outline_mm, np.roll(outline_mm, -1, axis=0), strict=True):
         length = float(np.linalg.norm(b - a))
         usable = length - 2.0 * CORNER_MM
@@ -91,36 +92,6 @@ def jaw_pairs(part: Part) -> list[Outline]:
     return pairs
 
 
-def closure(points_mm: Array, normals: Array, friction: float, lever_mm: float) -> float:
-    """How well contacts resist every wrench: least over directions d of the greatest d·w over friction-cone edge wrenches.
-
-    Parameters
-    ----------
-    points_mm, normals : (n, 2) contacts and outward normals in the part frame.
-    friction : coefficient; the cone edges are ±atan(friction) from the inward normal.
-    lever_mm : divides the moment, so that all three wrench components are forces.
-
-    Returns
-    -------
-    ε of unit-force contacts; > 0 is force closure. The L∞ grasp quality of Ferrari & Canny (ICRA 1992), sampled on 96 directions.
-    """
-    sets = np.arange(len(points_mm))[None, :]
-    return float(closures(points_mm, normals, sets, friction, lever_mm)[0])
-
-
-def closures(points_mm: Array, normals: Array, sets: NDArray[np.int64], friction: float, lever_mm: float) -> Array:
-    """`closure` of many sets (k, n) of contact indices: (k,)."""
-    angle = math.atan(friction)
-    inward = np.arctan2(-normals[:, 1], -normals[:, 0])
-    wrenches = np.empty((len(points_mm), 2, 3))
-    for side, turn in enumerate((-angle, angle)):
-        force = np.stack([np.cos(inward + turn), np.sin(inward + turn)], axis=1)
-        moment = points_mm[:, 0] * force[:, 1] - points_mm[:, 1] * force[:, 0]
-        wrenches[:, side] = np.column_stack([force, moment / lever_mm])
-    values: Array = _closures(np.einsum("csk,dk->dcs", wrenches, DIRECTIONS).max(axis=2), sets)
-    return values
-
-
 def _directions(n: int) -> Array:
     """Unit vectors (n, 3), evenly spread over the sphere (Fibonacci lattice)."""
     k = np.arange(n) + 0.5
@@ -132,18 +103,39 @@ def _directions(n: int) -> Array:
 DIRECTIONS = _directions(N_DIRECTIONS)
 
 
+def closures(points_mm: Array, normals: Array, sets: NDArray[np.int64], friction: float, lever_mm: float) -> Array:
+    """`closure` of many sets (k, n) of indices into the contacts: (k,)."""
+    return np.array([closure(points_mm[one], normals[one], friction, lever_mm) for one in sets])
+
+
 @njit(cache=True)
-def _closures(support: Array, sets: NDArray[np.int64]) -> Array:
-    """min over directions of max over the set's contacts of support (n_directions, m)."""
-    values = np.empty(sets.shape[0])
-    for k in range(sets.shape[0]):
-        least = np.inf
-        for d in range(support.shape[0]):
-            most = -np.inf
-            for c in range(sets.shape[1]):
-                most = max(most, support[d, sets[k, c]])
-            least = min(least, most)
-            if least < 0.0:
-                break
-        values[k] = least
-    return values
+def closure(points_mm: Array, normals: Array, friction: float, lever_mm: float) -> float:
+    """How well contacts resist every wrench: least over directions d of the greatest d·w over friction-cone edge wrenches.
+
+    Parameters
+    ----------
+    points_mm, normals : (n, 2) contacts and outward normals in the part frame.
+    friction : coefficient; the cone edges are ±atan(friction) from the inward normal.
+    lever_mm : divides the moment, so that all three wrench components are forces.
+
+    Returns
+    -------
+    ε of unit-force contacts; > 0 is force closure. The grasp quality of Ferrari & Canny (ICRA 1992) for independent contact forces,
+    sampled on 96 directions.
+    """
+    n = points_mm.shape[0]
+    angle = math.atan(friction)
+    wrenches = np.empty((2 * n, 3))
+    for c in range(n):
+        inward = math.atan2(-normals[c, 1], -normals[c, 0])
+        for side in range(2):
+            turned = inward + (angle if side == 0 else -angle)
+            fx, fy = math.cos(turned), math.sin(turned)
+            wrenches[2 * c + side] = fx, fy, (points_mm[c, 0] * fy - points_mm[c, 1] * fx) / lever_mm
+    least = np.inf
+    for d in range(DIRECTIONS.shape[0]):
+        most = -np.inf
+        for w in range(2 * n):
+            most = max(most, DIRECTIONS[d, 0] * wrenches[w, 0] + DIRECTIONS[d, 1] * wrenches[w, 1] + DIRECTIONS[d, 2] * wrenches[w, 2])
+        least = min(least, most)
+    return least

@@ -9,9 +9,10 @@ from functools import lru_cache
 import numpy as np
 
 from control.grasping.grasp import Grasp, base_bearings
+from control.grasping.hold import FINGERS_APART_MM, LEFT_MM, Bench
 from control.grasping.primitives import Primitives, primitives_of
 from control.grasping.reach import PITCH, Node, Reach, flood
-from control.grasping.templates import FINGERS_APART_MM, LEFT_MM, Bench, best_at, needs_one_angle
+from control.grasping.templates import best_at, needs_one_angle
 from control.model.contact import PartShape
 from control.model.kinematics import HandModel
 from hw_profiles.geometry import Array, Pose2
@@ -88,7 +89,7 @@ class Library:
             i, j, _ = reach.cell(np.array([x_mm, y_mm, reach.origin[2]]))
             n_x, n_y, _ = reach.margin_mm.shape
             if 0 <= i < n_x - 1 and 0 <= j < n_y - 1:
-                held = (reach.margin_mm[i : i + 2, j : j + 2] > -np.inf).all(axis=(0, 1))
+                held = reach.margin_mm[i : i + 2, j : j + 2].min(axis=(0, 1)) > -np.inf
                 if (held[:-1] & held[1:]).any():
                     return True
         return False

@@ -11,10 +11,9 @@ import math
 
 import numpy as np
 from numba import njit
-from numpy.typing import NDArray
 
 from control.model.contact import PartShape, touches
-from control.model.kinematics import HandModel, centre_lines_kernel, place_all
+from control.model.kinematics import HandArrays, HandModel, centre_lines_kernel, place_all
 from hw_profiles.geometry import Array
 
 SETTLED_MM = 0.05
@@ -38,42 +37,14 @@ def place(
     nearest: (n_fingers, 5) point and outward normal in the part frame [mm], and the signed clearance [mm].
     """
     joints, left_mm, touch = place_about(
-        hand.base_mm,
-        hand.base_yaw_rad,
-        hand.first,
-        hand.is_slide,
-        hand.link_mm,
-        hand.link_radius_mm,
-        hand.tip_radius_mm,
-        hand.contact_radius_mm,
-        hand.low,
-        hand.high,
-        hand.contact_back_mm,
-        shape.outline_mm,
-        shape.radius_mm,
-        contacts_mm,
-        normals,
-        turns_rad,
-        pose,
-        clearance_mm,
-        near,
+        hand.arrays, shape.outline_mm, shape.radius_mm, contacts_mm, normals, turns_rad, pose, clearance_mm, near
     )
     return joints, float(left_mm), touch
 
 
 @njit(cache=True)
 def place_about(
-    base_mm: Array,
-    base_yaw_rad: Array,
-    first: NDArray[np.int64],
-    is_slide: NDArray[np.bool_],
-    link_mm: Array,
-    link_radius_mm: Array,
-    tip_radius_mm: Array,
-    contact_radius_mm: Array,
-    low: Array,
-    high: Array,
-    back: Array,
+    hand: HandArrays,
     outline_mm: Array,
     disc_mm: float,
     contacts_mm: Array,
@@ -83,20 +54,20 @@ def place_about(
     clearance_mm: float,
     near: Array,
 ) -> tuple[Array, float, Array]:
-    n = base_mm.shape[0]
+    """Kernel of `place`."""
+    n = hand.base_mm.shape[0]
     cos, sin = math.cos(pose[2]), math.sin(pose[2])
     drawn_back, left_mm = np.zeros(n), np.empty(n)
     centres, yaws, touch = np.empty((n, 2)), np.empty(n), np.empty((n, 5))
     joints = near
     for _ in range(N_CORRECTIONS):
         for f in range(n):
-            off = contact_radius_mm[f] + clearance_mm + drawn_back[f]
+            off = hand.contact_radius_mm[f] + clearance_mm + drawn_back[f]
             px, py = contacts_mm[f, 0] + normals[f, 0] * off, contacts_mm[f, 1] + normals[f, 1] * off
             centres[f, 0], centres[f, 1] = pose[0] + cos * px - sin * py, pose[1] + sin * px + cos * py
             yaws[f] = math.atan2(normals[f, 1], normals[f, 0]) + turns_rad[f] + pose[2]
-        joints = place_all(base_mm, base_yaw_rad, first, is_slide, link_mm, low, high, back, centres, yaws, joints, left_mm)
-        lines = centre_lines_kernel(base_mm, base_yaw_rad, first, is_slide, link_mm, joints)
-        touches(lines, first, link_radius_mm, tip_radius_mm, pose, outline_mm, disc_mm, touch)
+        joints = place_all(hand, centres, yaws, joints, left_mm)
+        touches(hand, centre_lines_kernel(hand, joints), pose, outline_mm, disc_mm, touch)
         short = 0.0
         for f in range(n):
             lack = clearance_mm - touch[f, 4]

@@ -12,8 +12,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from control.grasping.hold import Bench
 from control.grasping.reach import CORNERS, PITCH, Reach
-from control.grasping.templates import Bench
 from hw_profiles.geometry import Array
 
 TIGHT_MM = -6.0  # clearance of a tight primitive

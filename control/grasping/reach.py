@@ -4,18 +4,17 @@ from __future__ import annotations
 
 import itertools
 import math
-from collections import deque
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
 from control.grasping.grasp import Grasp
-from control.grasping.templates import Bench
+from control.grasping.hold import Bench, flood_kernel
 from hw_profiles.geometry import Array
 
-PITCH = np.array([10.0, 10.0, math.radians(15.0)])  # lattice steps: mm, mm, rad
-N_HALF = (8, 8, 12)  # steps either way of the origin
+PITCH = np.array([7.5, 7.5, math.radians(7.5)])  # lattice steps: mm, mm, rad
+N_HALF = (11, 11, 20)  # steps either way of the origin
 CORNERS = np.array(list(itertools.product((0, 1), repeat=3)))  # of a lattice cell, (8, 3)
 
 Node = tuple[int, int, int]
@@ -72,7 +71,7 @@ class Reach:
     def yaw_span(self, x_mm: float, y_mm: float, yaw_rad: float) -> tuple[float, float]:
         """Least and greatest yaw that can be held at (x, y) without leaving, starting from `yaw_rad` (which must be held)."""
         i, j, k = self.cell(np.array([x_mm, y_mm, yaw_rad]))
-        held = (self.margin_mm[i : i + 2, j : j + 2] > -np.inf).all(axis=(0, 1))
+        held = self.margin_mm[i : i + 2, j : j + 2].min(axis=(0, 1)) > -np.inf
         low, high = k, k + 1
         while low > 0 and held[low - 1]:
             low -= 1
@@ -90,29 +89,21 @@ def flood(bench: Bench, grasp: Grasp, start: Array) -> Reach:
     origin = start - PITCH * np.array(N_HALF)
     margins = np.full(shape, -np.inf)
     joints = np.full((*shape, bench.hand.n_joints), np.nan)
-    seen = np.zeros(shape, dtype=bool)
-    queue: deque[tuple[Node, Array]] = deque([(N_HALF, bench.hand.home)])
-    seen[N_HALF] = True
-    while queue:
-        node, near = queue.popleft()
-        hold = bench.hold(grasp, origin + PITCH * np.array(node), near)
-        if hold is None:
-            continue
-        margins[node], joints[node] = hold.margin_mm, hold.joints
-        for neighbour in _neighbours(node, shape):
-            if not seen[neighbour]:
-                seen[neighbour] = True
-                queue.append((neighbour, hold.joints))
+    flood_kernel(
+        bench.hand.arrays,
+        bench.shape.outline_mm,
+        bench.shape.radius_mm,
+        bench.demands,
+        grasp.points_mm,
+        grasp.normals,
+        grasp.jaw_turn_rad,
+        origin,
+        PITCH,
+        np.array(N_HALF),
+        bench.hand.home,
+        margins,
+        joints,
+    )
     for array in (origin, margins, joints):
         array.setflags(write=False)
     return Reach(grasp, origin, margins, joints)
-
-
-def _neighbours(node: Node, shape: tuple[int, ...]) -> list[Node]:
-    found: list[Node] = []
-    for axis, step in itertools.product(range(3), (-1, 1)):
-        place = list(node)
-        place[axis] += step
-        if 0 <= place[axis] < shape[axis]:
-            found.append((place[0], place[1], place[2]))
-    return found

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import itertools
 import math
-from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
@@ -12,16 +11,13 @@ from numpy.typing import NDArray
 from control.grasping import contacts
 from control.grasping.contacts import Outline
 from control.grasping.grasp import Grasp, base_bearings
-from control.model.caging import Ring
-from control.model.contact import Clearances, PartShape
+from control.grasping.hold import FINGERS_APART_MM, MIN_CLOSURE, Bench, Hold
 from control.model.kinematics import HandModel
 from hw_profiles.geometry import Array
 from hw_profiles.part import Disc, Part
 
 PHASES_RAD = np.radians(np.arange(-90.0, 91.0, 15.0))
 N_NEAREST = {2: 6, 3: 4, 4: 3}  # contacts tried per finger and phase; 2 for hands with more fingers
-MIN_CLOSURE = 0.05
-LEFT_MM = 0.8  # greatest distance that inverse kinematics may leave
 PLENTY_MM = 6.0  # a cage margin beyond this is worth no more
 N_PROBED = 40
 PROBES = np.array(
@@ -30,51 +26,6 @@ PROBES = np.array(
         *[(0.0, 0.0, math.radians(turn)) for turn in (-60, -45, -30, -15, 15, 30, 45, 60)],
     ]
 )
-FINGERS_APART_MM = 1.0
-
-
-@dataclass(frozen=True, eq=False)
-class Bench:
-    """The hand and part under question, with the compiled tests on them."""
-
-    hand: HandModel
-    part: Part
-    shape: PartShape
-    ring: Ring
-    clearances: Clearances
-    margin_mm: float  # what the cage certificate must show; −inf where no cage is required
-
-    @classmethod
-    def of(cls, hand: HandModel, part: Part, margin_mm: float) -> Bench:
-        """Tests for a hand and a part."""
-        return cls(hand, part, PartShape.of(part), Ring(hand, part), Clearances(hand, PartShape.of(part)), margin_mm)
-
-    @property
-    def lever_mm(self) -> float:
-        """What turns a moment into a force of like size: the part's circumradius."""
-        return self.part.circumradius_mm
-
-    def hold(self, grasp: Grasp, ring: Array, near: Array) -> Hold | None:
-        """The grasp touching at a ring pose (3,), if its fingers reach, keep apart, close on the part and cage it as asked."""
-        joints, left_mm, touch = grasp.touching(self.hand, self.shape, ring, 0.0, near)
-        if left_mm > LEFT_MM or self.clearances.between_fingers(joints) < FINGERS_APART_MM:
-            return None
-        margin_mm = self.ring.certify(joints, ring).margin_mm
-        if margin_mm < self.margin_mm:
-            return None
-        quality = 1.0
-        if not self.hand.is_jaw.all():  # flat jaws take moments that point contacts do not
-            quality = contacts.closure(touch[:, :2], touch[:, 2:4], self.part.friction, self.lever_mm)
-        return Hold(joints, margin_mm, quality) if quality > MIN_CLOSURE else None
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class Hold:
-    """A grasp in place: joints (n_joints,), cage margin [mm], closure ε of the contacts as they are."""
-
-    joints: Array
-    margin_mm: float
-    closure: float
 
 
 def candidates(bench: Bench, part_yaw_rad: float) -> list[Grasp]:
@@ -85,7 +36,7 @@ def candidates(bench: Bench, part_yaw_rad: float) -> list[Grasp]:
     sets = _contact_sets(bench, outline, part_yaw_rad)
     if not len(sets):
         return []
-    quality = contacts.closures(outline.points_mm, outline.normals, sets, bench.part.friction, bench.lever_mm)
+    quality = contacts.closures(outline.points_mm, outline.normals, sets, bench.part.friction, bench.demands.lever_mm)
     free_yaw = np.full(bench.hand.n_fingers, math.nan)
     order = [k for k in np.argsort(-quality) if quality[k] > MIN_CLOSURE]
     return [Grasp(outline.points_mm[sets[k]], outline.normals[sets[k]], free_yaw, float(quality[k])) for k in order]
@@ -95,7 +46,7 @@ def _contact_sets(bench: Bench, outline: Outline, part_yaw_rad: float) -> NDArra
     """Contact indices (k, n_fingers): for each phase, each finger tries the contacts nearest to its bearing."""
     wanted = base_bearings(bench.hand, np.zeros(2)) - part_yaw_rad
     n_nearest = N_NEAREST.get(bench.hand.n_fingers, 2)
-    found = set()
+    found: set[tuple[int, ...]] = set()
     for phase in PHASES_RAD:
         turn = np.abs(np.angle(np.exp(1j * (outline.bearings_rad[None, :] - wanted[:, None] - phase))))
         nearest = np.argsort(turn, axis=1)[:, :n_nearest]
@@ -142,7 +93,7 @@ def best_at(bench: Bench, part_yaw_rad: float) -> Grasp | None:
 
 def _worth(bench: Bench, hold: Hold) -> float:
     """How good a hold is: closure, cage margin up to what is plenty, and room in the joints."""
-    margin = 1.0 if bench.margin_mm == -math.inf else min(hold.margin_mm, PLENTY_MM) / PLENTY_MM
+    margin = 1.0 if bench.demands.margin_mm == -math.inf else min(hold.margin_mm, PLENTY_MM) / PLENTY_MM
     return hold.closure * margin * (0.2 + _joint_room(bench.hand, hold.joints))
 
 

@@ -8,8 +8,8 @@ from dataclasses import dataclass
 import numpy as np
 
 from control.grasping.grasp import Grasp
+from control.grasping.hold import FINGERS_APART_MM, LEFT_MM, Bench
 from control.grasping.placing import place
-from control.grasping.templates import FINGERS_APART_MM, LEFT_MM, Bench
 from control.model.kinematics import contact_centres, link_yaws
 from hw_profiles.geometry import Array, Pose2
 
@@ -96,7 +96,7 @@ def _try(
     if not _is_clear(bench, postures, n_held, n_free, part_pose, 0.3 * stand_off_mm):
         return None
     margin_mm = min(bench.ring.certify(joints, part_pose.as_array()).margin_mm for joints in postures)
-    return Path(np.array(times), np.array(postures), margin_mm) if margin_mm >= min(bench.margin_mm, PATH_MARGIN_MM) else None
+    return Path(np.array(times), np.array(postures), margin_mm) if margin_mm >= min(bench.demands.margin_mm, PATH_MARGIN_MM) else None
 
 
 def _shift(bench: Bench, grasp: Grasp, ring: Array, near: Array, clearances_mm: Array) -> list[Array] | None:

@@ -18,7 +18,7 @@ from numba import njit
 from numpy.typing import NDArray
 
 from control.model.contact import finger_gap
-from control.model.kinematics import HandModel, centre_lines_kernel
+from control.model.kinematics import HandArrays, HandModel, centre_lines_kernel
 from hw_profiles.geometry import Array
 from hw_profiles.part import Part
 
@@ -48,30 +48,20 @@ class Ring:
 
     def certify(self, joints: Array, pose: Array) -> RingCertificate:
         """The certificate of a posture (n_joints,) about a part at `pose` (3,): mm, mm, rad."""
-        hand = self.hand
-        lines = centre_lines_kernel(hand.base_mm, hand.base_yaw_rad, hand.first, hand.is_slide, hand.link_mm, joints)
-        gaps = np.empty(hand.n_fingers)
-        margin_mm = ring_margin(lines, hand.first, hand.link_radius_mm, hand.tip_radius_mm, self.order, self.passes_mm, pose, gaps)
+        hand = self.hand.arrays
+        gaps = np.empty(self.hand.n_fingers)
+        margin_mm = ring_margin(hand, centre_lines_kernel(hand, joints), self.order, self.passes_mm, pose, gaps)
         return RingCertificate(margin_mm > 0.0, margin_mm, gaps)
 
 
 @njit(cache=True)
-def ring_margin(
-    lines_mm: Array,
-    first: NDArray[np.int64],
-    link_radius_mm: Array,
-    tip_radius_mm: Array,
-    order: NDArray[np.int64],
-    passes_mm: float,
-    pose: Array,
-    gaps_mm: Array,
-) -> float:
+def ring_margin(hand: HandArrays, lines_mm: Array, order: NDArray[np.int64], passes_mm: float, pose: Array, gaps_mm: Array) -> float:
     """Kernel of `Ring.certify`: fills `gaps_mm` and returns the margin."""
     n = order.shape[0]
     arrives, leaves, spot = np.empty((n, 2)), np.empty((n, 2)), np.empty(4)
     for k in range(n):
         following = (k + 1) % n
-        gaps_mm[k] = finger_gap(lines_mm, first, link_radius_mm, tip_radius_mm, order[k], order[following], spot)
+        gaps_mm[k] = finger_gap(hand, lines_mm, order[k], order[following], spot)
         leaves[k, 0], leaves[k, 1] = spot[0], spot[1]
         arrives[following, 0], arrives[following, 1] = spot[2], spot[3]
     turned = 0.0

@@ -11,9 +11,8 @@ from dataclasses import dataclass
 
 import numpy as np
 from numba import njit
-from numpy.typing import NDArray
 
-from control.model.kinematics import HandModel, centre_lines_kernel
+from control.model.kinematics import HandArrays, HandModel, centre_lines_kernel
 from hw_profiles.geometry import Array, Pose2
 from hw_profiles.part import Disc, Part
 
@@ -45,37 +44,31 @@ class Clearances:
 
     def to_part(self, joints: Array, pose: Pose2) -> Array:
         """Signed distance (n_fingers,) [mm] of every finger to the part at a pose."""
-        hand = self.hand
-        lines = centre_lines_kernel(hand.base_mm, hand.base_yaw_rad, hand.first, hand.is_slide, hand.link_mm, joints)
-        touch = np.empty((hand.n_fingers, 5))
-        touches(
-            lines, hand.first, hand.link_radius_mm, hand.tip_radius_mm, pose.as_array(), self.shape.outline_mm, self.shape.radius_mm, touch
-        )
+        hand = self.hand.arrays
+        touch = np.empty((self.hand.n_fingers, 5))
+        touches(hand, centre_lines_kernel(hand, joints), pose.as_array(), self.shape.outline_mm, self.shape.radius_mm, touch)
         return touch[:, 4]
 
     def between_fingers(self, joints: Array) -> float:
         """Least distance [mm] between the surfaces of two fingers; negative when they overlap."""
-        hand = self.hand
-        lines = centre_lines_kernel(hand.base_mm, hand.base_yaw_rad, hand.first, hand.is_slide, hand.link_mm, joints)
-        return float(fingers_apart(lines, hand.first, hand.link_radius_mm, hand.tip_radius_mm))
+        return float(fingers_apart(self.hand.arrays, centre_lines_kernel(self.hand.arrays, joints)))
 
 
 @njit(cache=True)
-def fingers_apart(lines_mm: Array, first: NDArray[np.int64], link_radius_mm: Array, tip_radius_mm: Array) -> float:
+def fingers_apart(hand: HandArrays, lines_mm: Array) -> float:
     """Least surface distance [mm] between any two fingers, given their centre lines (n_fingers, 4, 2)."""
     least = np.inf
     spot = np.empty(4)
     for f in range(lines_mm.shape[0]):
         for g in range(f):
-            least = min(least, finger_gap(lines_mm, first, link_radius_mm, tip_radius_mm, f, g, spot))
+            least = min(least, finger_gap(hand, lines_mm, f, g, spot))
     return least
 
 
 @njit(cache=True)
-def finger_gap(
-    lines_mm: Array, first: NDArray[np.int64], link_radius_mm: Array, tip_radius_mm: Array, f: int, g: int, spot: Array
-) -> float:
+def finger_gap(hand: HandArrays, lines_mm: Array, f: int, g: int, spot: Array) -> float:
     """Surface distance [mm] of two fingers; `spot` receives where it is: link and share along it, on each centre line."""
+    first, link_radius_mm, tip_radius_mm = hand.first, hand.link_radius_mm, hand.tip_radius_mm
     least = np.inf
     n_f, n_g = first[f + 1] - first[f], first[g + 1] - first[g]
     for i in range(n_f + 1):  # index n stands for the round tip
@@ -120,29 +113,20 @@ def segment_distance(a: Array, b: Array, c: Array, d: Array) -> tuple[float, flo
 
 
 @njit(cache=True)
-def touches(
-    lines_mm: Array,
-    first: NDArray[np.int64],
-    link_radius_mm: Array,
-    tip_radius_mm: Array,
-    pose: Array,
-    outline_mm: Array,
-    disc_mm: float,
-    touch: Array,
-) -> None:
+def touches(hand: HandArrays, lines_mm: Array, pose: Array, outline_mm: Array, disc_mm: float, touch: Array) -> None:
     """Where every finger is nearest to the part at `pose` (3,): fills `touch` (n_fingers, 5) with the point on the outline and the
     outward normal there, in the part frame [mm], and the signed clearance [mm]."""
     cos, sin = math.cos(pose[2]), math.sin(pose[2])
     local = np.empty((4, 2))
     for f in range(lines_mm.shape[0]):
-        n_links = first[f + 1] - first[f]
+        n_links = hand.first[f + 1] - hand.first[f]
         touch[f, 4] = np.inf
         for k in range(n_links + 1):
             x, y = lines_mm[f, k, 0] - pose[0], lines_mm[f, k, 1] - pose[1]
             local[k, 0], local[k, 1] = cos * x + sin * y, -sin * x + cos * y
         for k in range(n_links):
-            _nearest_on_link(local[k], local[k + 1], link_radius_mm[first[f] + k], outline_mm, disc_mm, touch[f])
-        _nearest_on_link(local[n_links], local[n_links], tip_radius_mm[f], outline_mm, disc_mm, touch[f])
+            _nearest_on_link(local[k], local[k + 1], hand.link_radius_mm[hand.first[f] + k], outline_mm, disc_mm, touch[f])
+        _nearest_on_link(local[n_links], local[n_links], hand.tip_radius_mm[f], outline_mm, disc_mm, touch[f])
 
 
 @njit(cache=True)

@@ -11,7 +11,7 @@ import math
 from collections.abc import Callable
 from dataclasses import dataclass
 from functools import cached_property
-from typing import Any
+from typing import Any, NamedTuple
 
 import numpy as np
 from numba import njit
@@ -28,6 +28,22 @@ def _frozen(values: ArrayLike, kind: type = float) -> Any:
     array: Array = np.array(values, dtype=kind)
     array.setflags(write=False)
     return array
+
+
+class HandArrays(NamedTuple):
+    """A hand as kernels take it; the fields are those of `HandModel`."""
+
+    base_mm: Array
+    base_yaw_rad: Array
+    first: NDArray[np.int64]
+    is_slide: NDArray[np.bool_]
+    link_mm: Array
+    link_radius_mm: Array
+    tip_radius_mm: Array
+    contact_radius_mm: Array
+    contact_back_mm: Array
+    low: Array
+    high: Array
 
 
 @dataclass(frozen=True, eq=False)
@@ -133,6 +149,11 @@ class HandModel:
         """No-load speed (n_joints,) [rad/s] or [mm/s]."""
         return self._per_joint(lambda joint, servo: math.radians(servo.speed_deg_per_s) * joint.per_horn_rad)
 
+    @cached_property
+    def arrays(self) -> HandArrays:
+        """What kernels take."""
+        return HandArrays(*(getattr(self, name) for name in HandArrays._fields))
+
     def joints_of(self, finger: int) -> slice:
         """Where a finger's joints stand in the hand's joint vector."""
         return slice(int(self.first[finger]), int(self.first[finger + 1]))
@@ -140,7 +161,7 @@ class HandModel:
 
 def centre_lines(model: HandModel, joints: Array) -> Array:
     """Link ends of every finger: (n_fingers, 4, 2) [mm], base first; shorter fingers repeat their tip."""
-    lines: Array = centre_lines_kernel(model.base_mm, model.base_yaw_rad, model.first, model.is_slide, model.link_mm, joints)
+    lines: Array = centre_lines_kernel(model.arrays, joints)
     return lines
 
 
@@ -212,36 +233,24 @@ def place_contacts(model: HandModel, centres_mm: Array, yaws_rad: Array, near: A
     `yaws_rad` (n_fingers,) are wanted directions of the last links, nan where they do not matter. See `place_contact`.
     """
     left_mm = np.empty(model.n_fingers)
-    joints = place_all(
-        model.base_mm,
-        model.base_yaw_rad,
-        model.first,
-        model.is_slide,
-        model.link_mm,
-        model.low,
-        model.high,
-        model.contact_back_mm,
-        centres_mm,
-        yaws_rad,
-        near,
-        left_mm,
-    )
+    joints = place_all(model.arrays, centres_mm, yaws_rad, near, left_mm)
     return joints, left_mm
 
 
 @njit(cache=True)
-def centre_lines_kernel(base_mm, base_yaw_rad, first, is_slide, link_mm, joints):  # type: ignore[no-untyped-def]
-    n_fingers = base_mm.shape[0]
+def centre_lines_kernel(hand: HandArrays, joints: Array) -> Array:
+    """Kernel of `centre_lines`."""
+    n_fingers = hand.base_mm.shape[0]
     lines = np.empty((n_fingers, MAX_LINKS + 1, 2))
     for f in range(n_fingers):
-        x, y, yaw = base_mm[f, 0], base_mm[f, 1], base_yaw_rad[f]
+        x, y, yaw = hand.base_mm[f, 0], hand.base_mm[f, 1], hand.base_yaw_rad[f]
         lines[f, 0, 0], lines[f, 0, 1] = x, y
-        n = first[f + 1] - first[f]
+        n = hand.first[f + 1] - hand.first[f]
         for j in range(MAX_LINKS):
             if j < n:
-                k = first[f] + j
-                length = joints[k] if is_slide[k] else link_mm[k]
-                if not is_slide[k]:
+                k = hand.first[f] + j
+                length = joints[k] if hand.is_slide[k] else hand.link_mm[k]
+                if not hand.is_slide[k]:
                     yaw += joints[k]
                 x += length * math.cos(yaw)
                 y += length * math.sin(yaw)
@@ -366,26 +375,21 @@ def _solve3(a: Array, b: Array, x: Array) -> None:
 
 
 @njit(cache=True)
-def place_all(
-    base_mm: Array,
-    base_yaw_rad: Array,
-    first: NDArray[np.int64],
-    is_slide: NDArray[np.bool_],
-    link_mm: Array,
-    low: Array,
-    high: Array,
-    back: Array,
-    centres_mm: Array,
-    yaws_rad: Array,
-    near: Array,
-    left_mm: Array,
-) -> Array:
+def place_all(hand: HandArrays, centres_mm: Array, yaws_rad: Array, near: Array, left_mm: Array) -> Array:
     """Kernel of `place_contacts`; `left_mm` (n_fingers,) receives the distances left."""
     joints = np.empty(near.shape[0])
-    for f in range(base_mm.shape[0]):
-        a, b = first[f], first[f + 1]
+    for f in range(hand.base_mm.shape[0]):
+        a, b = hand.first[f], hand.first[f + 1]
         joints[a:b], left_mm[f] = _place(
-            base_mm[f], base_yaw_rad[f], is_slide[a:b], link_mm[a:b], low[a:b], high[a:b], back[f], centres_mm[f],
-            yaws_rad[f], near[a:b],
-        )  # fmt: skip
+            hand.base_mm[f],
+            hand.base_yaw_rad[f],
+            hand.is_slide[a:b],
+            hand.link_mm[a:b],
+            hand.low[a:b],
+            hand.high[a:b],
+            hand.contact_back_mm[f],
+            centres_mm[f],
+            yaws_rad[f],
+            near[a:b],
+        )
     return joints

@@ -10,6 +10,7 @@ import numpy as np
 from control.grasping.transfer import Path
 from control.model.caging import RingCertificate
 from control.servoing import motion, watch
+from control.servoing.carry import Carry
 from control.servoing.controller import Controller
 from control.servoing.goals import (
     Arm,
@@ -26,7 +27,7 @@ from control.servoing.goals import (
     Reset,
     Stop,
 )
-from control.servoing.memory import Carry, Follow, Memory, Still, Task, seen, unseen
+from control.servoing.memory import Follow, Memory, Still, Task, seen, unseen
 from control.servoing.report import Command, Inputs, Report
 from control.servoing.states import PULSES_ON, Event, State, after
 from hw_profiles.errors import CommandError
