@@ -121,7 +121,7 @@ def _rim_spread(
         nx, ny = cos * normals[i, 0] - sin * normals[i, 1], sin * normals[i, 0] + cos * normals[i, 1]
         u, v, nu, nv, a, b = edge_in_image(lens, motion, x, y, z_mm, nx, ny)
         n_side = min(int(cell_mm * math.hypot(a, b) / TAP_PX), (MAX_TAPS - 1) // 2)
-        _, contrast, spreads[i] = read_edge(grey, u - u_0, v - v_0, nu, nv, n_side, taps)
+        _, contrast, spreads[i], _ = read_edge(grey, u - u_0, v - v_0, nu, nv, n_side, taps)
         seen[i] = contrast
     return median_where(spreads, seen)
 

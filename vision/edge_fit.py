@@ -25,7 +25,10 @@ from vision.frames import Pixels
 SAMPLES_PER_CELL_EDGE = 2
 TAP_PX = 0.5
 MAX_TAPS = 33
-N_ROUNDS = 10
+N_ROUNDS = 24
+SETTLED_MM, SETTLED_RAD = 1e-4, 1e-5  # a smaller step ends the fit
+LOOSE_MM = 3e-3  # a larger step after the last round means there is no pose to be had
+LEAST_GAIN = 0.2
 INLIER_PX = 0.45  # an edge this close to where the pose puts it agrees with the pose
 MIN_AGREEING = 14
 MIN_CONTRAST = 12.0  # grey levels across an edge, below which it is noise
@@ -133,14 +136,17 @@ def bilinear(grey: Pixels, u: float, v: float) -> float:
 
 
 @njit(cache=True)
-def read_edge(grey: Pixels, u: float, v: float, nu: float, nv: float, n_side: int, taps: Array) -> tuple[float, float, float]:
-    """Offset along the normal [px], contrast and variance of the edge through (u, v); contrast 0 where there is none."""
+def read_edge(grey: Pixels, u: float, v: float, nu: float, nv: float, n_side: int, taps: Array) -> tuple[float, float, float, float]:
+    """Offset along the normal [px], contrast and variance of the edge through (u, v), and how much of a shift the offset shows.
+
+    Contrast 0: there is no edge. The centroid of a slope g cut off at ± w moves by 1 − w (g(−w) + g(w)) / ∫g of a shift.
+    """
     n = 2 * n_side + 1
     for k in range(n):
         s = (k - n_side) * TAP_PX
         taps[k] = bilinear(grey, u + s * nu, v + s * nv)
         if taps[k] < 0.0:
-            return 0.0, 0.0, 0.0
+            return 0.0, 0.0, 0.0, 0.0
     rise, first, second = 0.0, 0.0, 0.0
     for k in range(n - 1):
         slope = taps[k + 1] - taps[k]
@@ -151,9 +157,10 @@ def read_edge(grey: Pixels, u: float, v: float, nu: float, nv: float, n_side: in
             second += slope * s * s
     contrast = taps[n - 1] - taps[0]
     if contrast < MIN_CONTRAST or contrast < 0.5 * rise:
-        return 0.0, 0.0, 0.0
+        return 0.0, 0.0, 0.0, 0.0
     offset = first / rise
-    return offset, contrast, second / rise - offset * offset
+    at_ends = max(taps[1] - taps[0], 0.0) + max(taps[n - 1] - taps[n - 2], 0.0)
+    return offset, contrast, second / rise - offset * offset, 1.0 - (n_side - 0.5) * at_ends / rise
 
 
 @njit(cache=True)
@@ -176,7 +183,8 @@ def _gauss_newton(
     cell_px = cell_mm * math.sqrt(abs(ux * vy - uy * vx))
     taps, matrix, vector = np.empty(MAX_TAPS), np.empty((4, 4)), np.empty(4)
     rows = np.ones((points.shape[0], 4))
-    bleed_px = 0.0
+    gains = np.empty(points.shape[0])
+    bleed_px, moved = 0.0, math.inf
     widest, narrowest = min(max(0.48 * cell_px, 1.0), 7.0), min(max(0.36 * cell_px, 1.0), 3.0)
     rms, n_agreeing = 0.0, 0
     for turn in range(N_ROUNDS):
@@ -191,17 +199,19 @@ def _gauss_newton(
             rows[i, 2] = -rows[i, 0] * dy + rows[i, 1] * dx
             u, v = u + bleed_px * nu, v + bleed_px * nv
             samples[i, 0], samples[i, 1] = u, v
-            samples[i, 2], samples[i, 3], samples[i, 4] = read_edge(grey, u - u_0, v - v_0, nu, nv, n_side, taps)
+            samples[i, 2], samples[i, 3], samples[i, 4], gains[i] = read_edge(grey, u - u_0, v - v_0, nu, nv, n_side, taps)
         rms, n_agreeing = _normal_equations(samples, rows, keep_px, matrix, vector)
         if (n_agreeing < MIN_AGREEING and turn > 3) or abs(np.linalg.det(matrix)) < 1e-6:
             return pose, matrix, 0.0, 0
-        if turn == N_ROUNDS - 1:
+        if moved < SETTLED_MM and keep_px == INLIER_PX and reach == narrowest:
             break
-        step = np.linalg.solve(matrix, vector)
+        # A blurred edge is cut off by the window and shows only part of its offset; Newton's step makes up for it.
+        step = np.linalg.solve(matrix, vector) / min(max(median_where(gains, samples[:, 5]), LEAST_GAIN), 1.0)
         pose += step[:3]
         bleed_px += step[3]
-        if keep_px == INLIER_PX and reach == narrowest and abs(step[0]) + abs(step[1]) < 1e-4 and abs(step[2]) < 1e-5:
-            break
+        moved = abs(step[0]) + abs(step[1]) + abs(step[2]) * SETTLED_MM / SETTLED_RAD
+    if moved > LOOSE_MM:
+        return pose, matrix, 0.0, 0
     covariance = np.linalg.inv(matrix)[:3, :3] * max(rms, EDGE_SD_PX) ** 2
     return pose, covariance, rms, n_agreeing  # type: ignore[return-value]  # numpy: LinAlg answers any float
 
