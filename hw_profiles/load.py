@@ -25,7 +25,7 @@ DEFAULT_RIG = "trefoil"
 
 Kind = Literal["hands", "parts", "cameras", "boards", "rigs"]
 P = TypeVar("P", bound=Profile)
-UNION_TAGS = ("revolute", "prismatic", "disc", "polygon")  # in an error's location, but no key of the file
+UNION_TAGS = ("revolute", "prismatic", "disc", "polygon", "36h11", "two-spots")  # in an error's location, but no key of the file
 
 
 def shipped(kind: Kind) -> tuple[str, ...]:
@@ -90,6 +90,11 @@ def parse(kind: type[P], text: str, file: str) -> P:
     return _checked(kind, lambda: kind.model_validate_json(json.dumps(data, default=str)), file)
 
 
+def parse_json(kind: type[P], text: str, file: str) -> P:
+    """A checked profile type from JSON text; `file` names it in errors. Raises ProfileError."""
+    return _checked(kind, lambda: kind.model_validate_json(text), file)
+
+
 def _load(kind: type[P], folder: Kind, name_or_path: str, beside: Path | None) -> P:
     path = _find(folder, name_or_path, beside)
     return parse(kind, _text(path), path.name)
@@ -102,9 +107,7 @@ def _find(folder: Kind, name_or_path: str, beside: Path | None) -> Path:
     path = path if beside is None else beside / path
     if not path.is_file():
         names = ", ".join(shipped(folder))
-        raise ProfileError(
-            [Problem(name_or_path, "", "", f"no such file, and no shipped {folder[:-1]}; shipped {folder}: {names}")]
-        )
+        raise ProfileError([Problem(name_or_path, "", "", f"no such file, and no shipped {folder[:-1]}; shipped {folder}: {names}")])
     return path
 
 
@@ -143,7 +146,7 @@ def _keys_at(kind: type[Profile], steps: tuple[int | str, ...]) -> list[str]:
     tables = [kind]
     for step in steps:
         if step in UNION_TAGS:
-            tables = [table for table in tables if step in get_args(table.model_fields["kind"].annotation)]
+            tables = [table for table in tables if any(step in get_args(f.annotation) for f in table.model_fields.values())]
         elif any(step in table.model_fields for table in tables):
             fields = [table.model_fields[str(step)] for table in tables if step in table.model_fields]
             tables = [found for field in fields for found in _profiles_in(field.annotation)]

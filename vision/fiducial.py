@@ -9,7 +9,7 @@ import cv2
 import numpy as np
 
 from hw_profiles.geometry import Array, Pose2
-from hw_profiles.part import Part
+from hw_profiles.part import Fiducial, Part
 from vision import pattern
 from vision.camera_model import CameraModel
 from vision.frames import Pixels
@@ -30,12 +30,14 @@ class Finder:
     """Looks for the tags of some parts in a whole frame or a cut-out of one."""
 
     def __init__(self, model: CameraModel, parts: tuple[Part, ...]) -> None:
-        self._parts = parts
+        tags = [part.fiducial for part in parts if isinstance(part.fiducial, Fiducial)]
+        if len(tags) != len(parts):
+            raise ValueError("the finder of tags was given a part without a tag")
         heights = [part.height_mm for part in parts]
         scales = [model.px_per_mm((0.0, 0.0), height) for height in heights]
-        self._tag_px = [part.fiducial.size_mm * scale for part, scale in zip(parts, scales, strict=True)]
+        self._tag_px = [tag.size_mm * scale for tag, scale in zip(tags, scales, strict=True)]
         self.shrink = 2 if min(self._tag_px) / 2.0 >= MIN_TAG_PX else 1
-        ids = [part.fiducial.id for part in parts]
+        ids = [tag.id for tag in tags]
         self._family = cv2.aruco.Dictionary(np.ascontiguousarray(pattern.family().bytesList[ids]), 6, 5)
 
     def find(self, pixels: Pixels, corner_px: tuple[int, int] = (0, 0), shrink: int | None = None) -> list[Sighting]:

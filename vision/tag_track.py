@@ -13,7 +13,7 @@ import numpy as np
 
 from hw_profiles.geometry import Array, Pose2
 from hw_profiles.observation import NoPose, PartPose
-from hw_profiles.part import Part
+from hw_profiles.part import Fiducial, Part
 from vision import edge_checks, edge_fit, fiducial, pose_filter
 from vision.camera_model import CameraModel
 from vision.edge_checks import Quality
@@ -24,6 +24,7 @@ from vision.pose_filter import Belief
 
 MAX_BLUR_CELLS = 0.36  # more, and neighbouring edges pull at each other
 SURE_CELLS, SURE_EDGES = 0.72, 0.5  # a tag seen so well needs no prediction to vouch for it
+LEAST_CONSISTENT = 0.7
 MAX_TILT_RAD = math.radians(6.0)
 COAST_US = 400_000  # a prediction older than this is no place to look
 POSITION_FLOOR_MM, YAW_FLOOR_RAD = 0.004, 0.0004  # standard deviations below which calibration, not noise, decides
@@ -34,20 +35,19 @@ Cut = tuple[Pixels, tuple[int, int]]  # grey pixels and the (u, v) of their firs
 class TagTrack:
     """Follows one part by its tag; `quality` is of the last fit, None where there was none."""
 
-    def __init__(self, model: CameraModel, part: Part) -> None:
-        self.part, self.quality = part, None
+    def __init__(self, model: CameraModel, part: Part, tag: Fiducial) -> None:
+        self.part, self.tag = part, tag
+        self.quality: Quality | None = None
         self._model = model
         self._belief: Belief | None = None
-        self._template = EdgeTemplate.of(part.fiducial)
+        self._template = EdgeTemplate.of(tag)
         self._finder = Finder(model, (part,))
-
-    quality: Quality | None
 
     def follow(self, frame: Frame) -> PartPose | NoPose:
         """The pose near where the part was expected."""
         self.quality = None
         if self._belief is None or frame.captured_at_us - self._belief.at_us > COAST_US:
-            return NoPose(f"tag {self.part.fiducial.id} is not in view: is it covered, out of the image or too dark?")
+            return NoPose(f"tag {self.tag.id} is not in view: is it covered, out of the image or too dark?")
         expected = pose_filter.predict(self._belief, frame.captured_at_us)
         near = self._near(frame.pixels, expected)
         if near is not None and not isinstance(near, NoPose):
@@ -55,12 +55,12 @@ class TagTrack:
         cut = self._cut(frame.pixels, expected.pose, 2.0)
         for sighting in self._finder.find(*cut, shrink=1) if cut else ():
             return self.restart(frame, sighting)
-        return near or NoPose(f"tag {self.part.fiducial.id} left the image: bring the part back into view")
+        return near or NoPose(f"tag {self.tag.id} left the image: bring the part back into view")
 
     def restart(self, frame: Frame, sighting: Sighting) -> PartPose | NoPose:
         """The pose from a decoded tag, whatever was believed before."""
         start, misfit_mm = fiducial.rigid_pose(self._model, self.part, sighting.corners_px)
-        tag = self.part.fiducial
+        tag = self.tag
         if misfit_mm > 0.12 * tag.size_mm:
             wanted = f"{tag.size_mm:g} mm wide at height {self.part.height_mm:g} mm"
             return NoPose(f"tag {tag.id} is not {wanted}: check the part's profile and the calibration")
@@ -83,14 +83,14 @@ class TagTrack:
             found = found if again is None or isinstance(again, NoPose) else again
         if isinstance(found, NoPose) or pose_filter.surprise(expected, *found) <= pose_filter.GATE or self._is_sure():
             return found
-        return NoPose(f"tag {self.part.fiducial.id} jumped farther than the part can move in a frame: is something else moving it?")
+        return NoPose(f"tag {self.tag.id} jumped farther than the part can move in a frame: is something else moving it?")
 
     def _search(self, pixels: Pixels, expected: Belief) -> tuple[Pose2, Array] | NoPose | None:
         """A fit from the place where the cells match best, as far around as the prediction is unsure."""
         cell = self._template.cell_mm
         sd = np.sqrt(np.diag(expected.covariance))
         reach_mm, reach_rad = min(max(3.0 * max(sd[0], sd[1]), 1.5 * cell), 4.0 * cell), min(max(3.0 * sd[2], 0.2), 0.6)
-        cut = self._cut(pixels, expected.pose, CUT_SIDES + reach_mm / self.part.fiducial.size_mm)
+        cut = self._cut(pixels, expected.pose, CUT_SIDES + reach_mm / self.tag.size_mm)
         if cut is None:
             return None
         return self._fit(
@@ -102,7 +102,7 @@ class TagTrack:
         return seen is not None and seen.cells_right >= SURE_CELLS and min(seen.agreeing_x, seen.agreeing_y) >= SURE_EDGES
 
     def _fit(self, cut: Cut, start: Pose2) -> tuple[Pose2, Array] | NoPose:
-        tag, height = self.part.fiducial, self.part.height_mm
+        tag, height = self.tag, self.part.height_mm
         found = edge_fit.fit(self._model, *cut, self._template, height, start)
         if found is None:
             return NoPose(f"tag {tag.id} shows no edges where it was expected: is it covered, out of the image or too dark?")
@@ -117,7 +117,7 @@ class TagTrack:
 
     def _cut(self, pixels: Pixels, pose: Pose2, sides: float = CUT_SIDES) -> Cut | None:
         """Grey cut-out around the tag; None where the tag is outside the image."""
-        tag = self.part.fiducial
+        tag = self.tag
         middle = pose.apply([tag.x_mm, tag.y_mm])
         u, v = self._model.project_plane(middle, self.part.height_mm)
         reach = tag.size_mm * self._model.px_per_mm(middle, self.part.height_mm) * sides + 8.0
@@ -150,6 +150,10 @@ def fault(found: EdgeFit, quality: Quality) -> str | None:
         return "shows too few of its edges: is it covered, blurred or too dark?"
     if quality.cells_right < 0.55 or quality.cells_right < quality.cells_aside + 0.12:
         return "does not look as it should: is it covered, damaged or badly lit?"
+    # Covered cells are right half of the time, so a share v in view gives (1 + v) / 2 right cells and v agreeing edges.
+    in_view = 2.0 * quality.cells_right - 1.0
+    if 0.5 * (quality.agreeing_x + quality.agreeing_y) < LEAST_CONSISTENT * in_view:
+        return "shows its cells but not its edges: is it blurred, covered or badly printed?"
     sd_mm = math.sqrt(max(found.covariance[0, 0], found.covariance[1, 1]))
     sd_rad = math.sqrt(found.covariance[2, 2])
     if sd_mm > 0.1 or sd_rad > math.radians(0.5):

@@ -127,7 +127,7 @@ class Renderer:
 
     def _cable(self, pose: Pose2, occlusion: float) -> Array:
         """A cable across the tag, as wide as the share of the tag's side it hides."""
-        side = self.part.fiducial.size_mm
+        side = 2.0 * self.part.fiducial.half_mm[1]
         self._cable_rad += float(self._rng.normal(0.0, 0.05))
         width = occlusion * side
         beside = float(self._rng.uniform(-0.5, 0.5)) * (side - width)

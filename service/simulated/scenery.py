@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from control.model.kinematics import HandModel
 from hw_profiles.geometry import Array
-from hw_profiles.part import Part
+from hw_profiles.part import Fiducial, Part, Spots
 from vision import pattern
 from vision.camera_model import CameraModel
 
@@ -76,7 +76,7 @@ def face_texture(part: Part, px_per_mm: float) -> tuple[NDArray[np.uint8], Array
     texel_from_part, (3,) : texels per mm, and the texel (column, row) of the part frame's origin; rows run along +y.
     """
     fine = 4  # painted so much finer, then averaged
-    cell_mm = part.fiducial.size_mm / pattern.N_CELLS
+    cell_mm = part.fiducial.half_mm[0] / (pattern.N_CELLS / 2)
     scale = round(TEXELS_PER_PX * px_per_mm * cell_mm * fine / 2) * 2 / (cell_mm * fine)  # cells end between fine texels
     half = math.ceil((part.circumradius_mm + 2.0) * scale)
     n = 2 * half + 1
@@ -102,13 +102,27 @@ def _paint_face(part: Part, x: NDArray[np.float32], y: NDArray[np.float32]) -> N
     colour = np.array(FACE, np.float32) + (tool_marks + 0.25 * (y - 0.5 * x))[..., None].astype(np.float32)
     scribe = (np.abs(y) < 0.35) & (x > 0.55 * part.circumradius_mm)
     colour[scribe] = SCRIBE
-    tag = part.fiducial
-    tag_from_part = tag.part_from_tag.inverse()
-    in_tag = tag_from_part.apply(np.stack([x, y], axis=-1)) / (tag.size_mm / pattern.N_CELLS) + pattern.N_CELLS / 2
-    column, row = np.floor(in_tag[..., 0]).astype(int), pattern.N_CELLS - 1 - np.floor(in_tag[..., 1]).astype(int)
+    mark = part.fiducial
+    in_mark = mark.part_from_tag.inverse().apply(np.stack([x, y], axis=-1))
+    if isinstance(mark, Spots):
+        _paint_spots(colour, mark, in_mark)
+    else:
+        _paint_tag(colour, mark, in_mark)
+    return colour
+
+
+def _paint_tag(colour: NDArray[np.float32], tag: Fiducial, in_mark: Array) -> None:
+    cell = in_mark / (tag.size_mm / pattern.N_CELLS) + pattern.N_CELLS / 2
+    column, row = np.floor(cell[..., 0]).astype(int), pattern.N_CELLS - 1 - np.floor(cell[..., 1]).astype(int)
     on_paper = (np.minimum(column, row) >= -1) & (np.maximum(column, row) <= pattern.N_CELLS)
     colour[on_paper] = PAPER
     on_tag = (np.minimum(column, row) >= 0) & (np.maximum(column, row) < pattern.N_CELLS)
     white = pattern.cells(tag.id)[np.clip(row, 0, pattern.N_CELLS - 1), np.clip(column, 0, pattern.N_CELLS - 1)]
     colour[on_tag & ~white] = INK
-    return colour
+
+
+def _paint_spots(colour: NDArray[np.float32], spots: Spots, in_mark: Array) -> None:
+    colour[np.all(np.abs(in_mark) <= np.array(spots.half_mm), axis=-1)] = PAPER
+    for side, rgb in ((-0.5, spots.first_rgb), (0.5, spots.second_rgb)):
+        away = np.hypot(in_mark[..., 0] - side * spots.spacing_mm, in_mark[..., 1])
+        colour[away <= spots.spot_mm / 2.0] = rgb[::-1]
