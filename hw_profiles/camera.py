@@ -49,9 +49,7 @@ class Camera(Profile):
     @model_validator(mode="after")
     def _fits_its_frame(self) -> Camera:
         if self.exposure_ms >= 1000.0 / self.fps:
-            raise refuse(
-                f"exposure_ms {self.exposure_ms:g} must be shorter than a frame, {1000.0 / self.fps:.2f} at fps {self.fps:g}"
-            )
+            raise refuse(f"exposure_ms {self.exposure_ms:g} must be shorter than a frame, {1000.0 / self.fps:.2f} at fps {self.fps:g}")
         for key, value, size in zip("uv", self.principal_px, (self.width_px, self.height_px), strict=True):
             if not 0 <= value <= size:
                 raise refuse(f"principal_px {key} {value:g} lies outside the image, allowed: 0 … {size}")

@@ -142,9 +142,7 @@ class Chain(Profile):
             if shown["low"] >= shown["high"]:
                 raise refuse(f"joints[{index}].low_{unit} {shown['low']:g} must be below high_{unit} {shown['high']:g}")
             if not shown["low"] <= shown["home"] <= shown["high"]:
-                raise refuse(
-                    f"joints[{index}].home_{unit} {shown['home']:g} must lie within {shown['low']:g} … {shown['high']:g}"
-                )
+                raise refuse(f"joints[{index}].home_{unit} {shown['home']:g} must lie within {shown['low']:g} … {shown['high']:g}")
         last = self.joints[-1]
         if last.kind == "revolute" and last.link_mm == 0:
             raise refuse(f"joints[{len(self.joints) - 1}].link_mm 0: the last joint must carry a link")

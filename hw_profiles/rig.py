@@ -70,13 +70,9 @@ class Rig(Bench):
                 allowed = ", ".join(f"{finger}.{joint}" for finger, joint in joints)
                 raise refuse(f"{key}: finger.joint {place} is not a joint of hand '{self.hand.name}'; allowed: {allowed}")
             if wire.channel >= self.board.n_channels:
-                raise refuse(
-                    f"{key}.channel {wire.channel} is not on board '{self.board.name}'; allowed: 0 … {self.board.n_channels - 1}"
-                )
+                raise refuse(f"{key}.channel {wire.channel} is not on board '{self.board.name}'; allowed: 0 … {self.board.n_channels - 1}")
             if wire.channel in used:
-                raise refuse(
-                    f"{key}.channel {wire.channel} drives both {used[wire.channel]} and {place}; allowed: one servo a channel"
-                )
+                raise refuse(f"{key}.channel {wire.channel} drives both {used[wire.channel]} and {place}; allowed: one servo a channel")
             used[wire.channel] = place
         wired = [(wire.finger, wire.joint) for wire in self.wiring]
         for finger, joint in joints:
@@ -88,6 +84,4 @@ class Rig(Bench):
     def wires(self) -> tuple[Wire, ...]:
         """One wire a joint, in joint order: fingers as listed, each from its base outward."""
         place = {(wire.finger, wire.joint): wire for wire in self.wiring}
-        return tuple(
-            place[finger.name, joint] for finger in self.hand.fingers for joint in range(len(self.hand.chain_of(finger).joints))
-        )
+        return tuple(place[finger.name, joint] for finger in self.hand.fingers for joint in range(len(self.hand.chain_of(finger).joints)))

@@ -9,7 +9,7 @@ import numpy as np
 from control.grasping.placing import place
 from control.model.contact import PartShape
 from control.model.kinematics import HandModel
-from hw_profiles.geometry import Array
+from hw_profiles.geometry import Array, Pose2
 
 
 @dataclass(frozen=True, eq=False)
@@ -28,6 +28,11 @@ class Grasp:
     normals: Array
     jaw_turn_rad: Array
     closure: float
+
+    def turned(self, angle_rad: float) -> Grasp:
+        """The same contacts for a part turned by an angle within its own frame."""
+        turn = Pose2(0.0, 0.0, angle_rad)
+        return Grasp(turn.rotate(self.points_mm), turn.rotate(self.normals), self.jaw_turn_rad, self.closure)
 
     def joints(self, hand: HandModel, shape: PartShape, ring: Array, clearance_mm: float, near: Array) -> tuple[Array, float]:
         """Joint values (n_joints,) of the grasp at ring pose (3,), every finger at a clearance; and by how much [mm] that falls short.

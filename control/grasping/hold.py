@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 from control.grasping.contacts import closure
 from control.grasping.grasp import Grasp
 from control.grasping.placing import place_about
-from control.model.caging import Ring, ring_margin
+from control.model.caging import Ring, RingArrays, ring_margin
 from control.model.contact import Clearances, PartShape, fingers_apart
 from control.model.kinematics import HandArrays, HandModel, centre_lines_kernel
 from hw_profiles.geometry import Array
@@ -30,8 +30,7 @@ class Demands(NamedTuple):
     jaws, which take moments that point contacts do not.
     """
 
-    order: NDArray[np.int64]
-    passes_mm: float
+    ring: RingArrays
     margin_mm: float
     friction: float
     lever_mm: float
@@ -62,7 +61,7 @@ class Bench:
         """Tests for a hand and a part; `margin_mm` is what the cage certificate must show, −inf for none."""
         shape, ring = PartShape.of(part), Ring(hand, part)
         friction = -1.0 if hand.is_jaw.all() else part.friction
-        demands = Demands(ring.order, part.cage_gap_mm, margin_mm, friction, part.circumradius_mm)
+        demands = Demands(ring.arrays, margin_mm, friction, part.circumradius_mm)
         return cls(hand, part, shape, ring, Clearances(hand, shape), demands)
 
     def hold(self, grasp: Grasp, ring: Array, near: Array) -> Hold | None:
@@ -99,7 +98,7 @@ def hold_kernel(
         return joints, 0.0, -1.0
     lines = centre_lines_kernel(hand, joints)
     gaps = np.empty(hand.base_mm.shape[0])
-    margin_mm = ring_margin(hand, lines, demands.order, demands.passes_mm, ring, gaps)
+    margin_mm = ring_margin(hand, demands.ring, lines, ring, gaps)
     if margin_mm < demands.margin_mm or fingers_apart(hand, lines) < FINGERS_APART_MM:
         return joints, margin_mm, -1.0
     quality = 1.0

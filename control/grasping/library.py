@@ -12,7 +12,7 @@ from control.grasping.grasp import Grasp, base_bearings
 from control.grasping.hold import FINGERS_APART_MM, LEFT_MM, Bench
 from control.grasping.primitives import Primitives, primitives_of
 from control.grasping.reach import PITCH, Node, Reach, flood
-from control.grasping.templates import best_at, needs_one_angle
+from control.grasping.templates import best_at
 from control.model.contact import PartShape
 from control.model.kinematics import HandModel
 from hw_profiles.geometry import Array, Pose2
@@ -54,14 +54,11 @@ class Library:
     def of(cls, hand: HandModel, part: Part, margin_mm: float, loose_mm: float) -> Library:
         """Search, check and flood; takes about a second. `margin_mm` is what the cage certificate must show, −inf for none."""
         bench = Bench.of(hand, part, margin_mm)
-        is_round = needs_one_angle(part)
-        yaws = [0.0] if is_round else list(np.arange(-math.pi, math.pi - 1e-9, ANGLE_STEP_RAD))
-        reaches = []
-        for yaw in yaws:
-            found = best_at(bench, yaw)
-            if found is not None:
-                reaches.append(flood(bench, found, np.array([0.0, 0.0, yaw])))
-        return cls(bench, tuple(reaches), park_posture(bench), is_round, loose_mm)
+        reaches = [] if part.n_fold == 0 else _reaches_over(bench, 2.0 * math.pi / part.n_fold)
+        if part.n_fold == 0:
+            found = best_at(bench, 0.0)
+            reaches = [] if found is None else [flood(bench, found, np.zeros(3))]
+        return cls(bench, tuple(reaches), park_posture(bench), part.n_fold == 0, loose_mm)
 
     def options(self, pose: Pose2) -> list[Option]:
         """Every way to take the part up at a pose, best cage margin first."""
@@ -117,6 +114,24 @@ class Library:
     def primitives(self, reach_index: int, cell: Node) -> Primitives:
         """The primitives of a cell of one of the reaches."""
         return _cached_primitives(self, reach_index, cell)
+
+
+def _reaches_over(bench: Bench, period_rad: float) -> list[Reach]:
+    """One reach for each part angle of the grid; a symmetric part is searched over one period only, and that is turned on."""
+    n_steps = max(1, round(period_rad / ANGLE_STEP_RAD))
+    n_periods = round(2.0 * math.pi / period_rad)
+    reaches = []
+    for step in range(n_steps):
+        yaw = -math.pi + step * period_rad / n_steps
+        grasp = best_at(bench, yaw)
+        if grasp is None:
+            continue
+        first = flood(bench, grasp, np.array([0.0, 0.0, yaw]))
+        reaches.append(first)
+        for k in range(1, n_periods):
+            turn = np.array([0.0, 0.0, k * period_rad])
+            reaches.append(Reach(grasp.turned(-k * period_rad), first.origin + turn, first.margin_mm, first.joints))
+    return reaches
 
 
 @lru_cache(maxsize=512)

@@ -14,7 +14,6 @@ from control.grasping.grasp import Grasp, base_bearings
 from control.grasping.hold import FINGERS_APART_MM, MIN_CLOSURE, Bench, Hold
 from control.model.kinematics import HandModel
 from hw_profiles.geometry import Array
-from hw_profiles.part import Disc, Part
 
 PHASES_RAD = np.radians(np.arange(-90.0, 91.0, 15.0))
 N_NEAREST = {2: 6, 3: 4, 4: 3}  # contacts tried per finger and phase; 2 for hands with more fingers
@@ -101,8 +100,3 @@ def _joint_room(hand: HandModel, joints: Array) -> float:
     """How far the joints are from their limits: 1 in the middle, 0 on a limit; the worst joint counts, saturating at a quarter."""
     room = np.minimum(joints - hand.low, hand.high - joints) / (0.25 * (hand.high - hand.low))
     return float(np.clip(room, 0.0, 1.0).min())
-
-
-def needs_one_angle(part: Part) -> bool:
-    """A disc looks the same at every angle: one angle stands for all."""
-    return isinstance(part.shape, Disc)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import math
 from dataclasses import dataclass
 
@@ -14,6 +15,7 @@ from control.model.kinematics import contact_centres, link_yaws
 from hw_profiles.geometry import Array, Pose2
 
 STEP_MM = 2.0  # between checked postures
+ORDERS = ((0.5, 0.4), (1.0, 0.0))  # the radius first, hugging the part; then both together
 PATH_MARGIN_MM = 1.0  # least cage margin on the way, where a cage is required
 STAND_OFFS_MM = (1.5, 3.0, 6.0, 10.0)  # tried in this order: the least opening that works
 
@@ -58,8 +60,8 @@ def transfer(
     `held` is what the fingers hold now: they open along its normals first. The part is taken to lie still at `part_pose`. Every
     posture clears the part and the other fingers, and shows the bench's cage margin.
     """
-    for stand_off_mm in STAND_OFFS_MM:
-        path = _try(bench, start, held, wanted, part_pose, squeeze_mm, speeds, stand_off_mm)
+    for stand_off_mm, order in itertools.product(STAND_OFFS_MM, ORDERS):
+        path = _try(bench, start, held, wanted, part_pose, squeeze_mm, speeds, stand_off_mm, order)
         if path is not None:
             return path
     return None
@@ -74,6 +76,7 @@ def _try(
     squeeze_mm: float,
     speeds: Speeds,
     stand_off_mm: float,
+    order: tuple[float, float],
 ) -> Path | None:
     postures, times = [start], [0.0]
     if held is not None:
@@ -86,7 +89,7 @@ def _try(
     closed = _shift(bench, grasp, ring, postures[-1], steps_mm)
     if closed is None:
         return None
-    around = _around(bench, postures[-1], closed[0], part_pose, stand_off_mm)
+    around = _around(bench, postures[-1], closed[0], part_pose, stand_off_mm, order)
     if around is None:
         return None
     n_held = len(postures)
@@ -110,8 +113,13 @@ def _shift(bench: Bench, grasp: Grasp, ring: Array, near: Array, clearances_mm: 
     return postures
 
 
-def _around(bench: Bench, start: Array, end: Array, part_pose: Pose2, stand_off_mm: float) -> list[Array] | None:
-    """Postures from `start` to `end`: each contact runs about the part, bearing and radius together, no nearer than the stand-off."""
+def _around(
+    bench: Bench, start: Array, end: Array, part_pose: Pose2, stand_off_mm: float, order: tuple[float, float]
+) -> list[Array] | None:
+    """Postures from `start` to `end`: each contact runs about the part, no nearer than the stand-off.
+
+    `order` says by which share of the way the radius is there and from which share on the bearing changes.
+    """
     hand, pose = bench.hand, part_pose.as_array()
     hand_from_part_inverse = part_pose.inverse()
     begin = hand_from_part_inverse.apply(contact_centres(hand, start))
@@ -125,11 +133,12 @@ def _around(bench: Bench, start: Array, end: Array, part_pose: Pose2, stand_off_
     postures: list[Array] = []
     near = start
     for s in np.linspace(0.0, 1.0, max(1, math.ceil(float(distance.max()) / STEP_MM)) + 1)[1:]:
-        bearing = from_bearing + s * turn
+        radius_share, bearing_share = min(s / order[0], 1.0), max(s - order[1], 0.0) / (1.0 - order[1])
+        bearing = from_bearing + bearing_share * turn
         rays = np.stack([np.cos(bearing), np.sin(bearing)], axis=1)
-        radius = from_radius + s * (to_radius - from_radius)
+        radius = from_radius + radius_share * (to_radius - from_radius)
         contacts = rays * (radius - hand.contact_radius_mm - stand_off_mm)[:, None]
-        turns = from_yaw + s * yaw_turn - bearing - part_pose.yaw_rad
+        turns = from_yaw + bearing_share * yaw_turn - bearing - part_pose.yaw_rad
         near, left_mm, _ = place(hand, bench.shape, contacts, rays, turns, pose, stand_off_mm, near)
         if left_mm > 5.0 * LEFT_MM:
             return None
