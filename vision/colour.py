@@ -46,12 +46,21 @@ class Palette:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class SpotFit:
-    """One spot's middle (2,) [mm] in the hand frame, its variance [mm²], area [mm²] and how far its pixels stray from a mixture."""
+    """One spot.
+
+    Attributes
+    ----------
+    centre_mm, variance : (2,) middle [mm] in the hand frame, and its variance [mm²].
+    area_mm2 : what the spot covers.
+    strays : share of pixels that are no mixture of spot and card, or not the one they should be.
+    ovalness : 0 for a round spot; difference of its principal second moments over their sum.
+    """
 
     centre_mm: Array
     variance: float
     area_mm2: float
     strays: float
+    ovalness: float
 
 
 def plate_colour(pixels: Pixels) -> Array:
@@ -80,7 +89,7 @@ def refine(model: CameraModel, pixels: Pixels, corner_px: tuple[int, int], spots
     lens, motion = model.lens, model.motion
     plane_from_pinhole = np.asarray(np.linalg.inv(model.pinhole_from_plane(z_mm)), dtype=float)
     centre = start_mm
-    result = np.zeros(6)
+    result = np.zeros(7)
     for _ in range(3):
         u, v = model.project_plane(centre, z_mm)
         reach = 0.75 * spots.spot_mm * model.px_per_mm(centre, z_mm) * 1.15 + 2.0
@@ -90,10 +99,10 @@ def refine(model: CameraModel, pixels: Pixels, corner_px: tuple[int, int], spots
             return None
         grid = np.indices(cut.shape[:2])[::-1].reshape(2, -1).T + np.array([u_0 + corner_px[0], v_0 + corner_px[1]], dtype=float)
         _unmix(np.ascontiguousarray(cut), grid, lens, motion, plane_from_pinhole, z_mm, centre, spots.spot_mm / 2.0, result)
-        if result[5] == 0.0:
+        if result[6] == 0.0:
             return None
         centre = result[:2].copy()
-    return SpotFit(centre, float(result[2]), float(result[3]), float(result[4]))
+    return SpotFit(centre, float(result[2]), float(result[3]), float(result[4]), float(result[5]))
 
 
 @njit(cache=True)
@@ -130,7 +139,7 @@ def _unmix(
     radius_mm: float,
     result: Array,
 ) -> None:
-    """Fills result: x, y [mm], variance [mm²], area [mm²], straying share, and 1 if all went well."""
+    """Fills result: x, y [mm], variance [mm²], area [mm²], straying share, ovalness, and 1 if all went well."""
     n = grid.shape[0]
     ideal = undistort_all(lens, grid)
     places, areas, away = np.empty((n, 2)), np.empty(n), np.empty(n)
@@ -158,6 +167,7 @@ def _unmix(
         return
     strays, inside, noise = 0.0, 0.0, 0.0
     total, first_x, first_y, lever = 0.0, 0.0, 0.0, 0.0
+    xx, yy, xy = 0.0, 0.0, 0.0
     for i in range(n):
         if away[i] > 1.45:
             continue
@@ -175,10 +185,15 @@ def _unmix(
         total += weight
         first_x += weight * places[i, 0]
         first_y += weight * places[i, 1]
+        dx, dy = places[i, 0] - centre[0], places[i, 1] - centre[1]
+        xx, yy, xy = xx + weight * dx * dx, yy + weight * dy * dy, xy + weight * dx * dy
         lever += areas[i] ** 2 * (away[i] * radius_mm) ** 2 * 0.5
     result[0], result[1] = first_x / total, first_y / total
     result[2] = noise / inside * lever / (total * total)
-    result[3], result[4], result[5] = total, strays / inside, 1.0
+    off_x, off_y = result[0] - centre[0], result[1] - centre[1]
+    xx, yy, xy = xx / total - off_x * off_x, yy / total - off_y * off_y, xy / total - off_x * off_y
+    result[3], result[4], result[6] = total, strays / inside, 1.0
+    result[5] = math.hypot(xx - yy, 2.0 * xy) / max(abs(xx + yy), 1e-9)
 
 
 def pair(first: list[Array], second: list[Array], spacing_mm: float) -> tuple[Array, Array] | None:

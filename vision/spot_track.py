@@ -21,6 +21,7 @@ COAST_US = 400_000
 MAX_SPACING_OFF = 0.008  # of the spacing, that the spots found may be off it
 AREA_RANGE = (0.85, 1.12)  # of a spot's area; a covered spot is smaller
 MAX_STRAYS = 0.04
+MAX_OVALNESS = 0.05
 FLOOR_MM = 0.01
 SEARCH_STRIDE = 2
 
@@ -102,6 +103,8 @@ def _spot_fault(found: SpotFit | None, spots: Spots) -> str | None:
     share = found.area_mm2 / (math.pi / 4.0 * spots.spot_mm**2)
     if not AREA_RANGE[0] < share < AREA_RANGE[1]:
         return f"shows {share:.0%} of its area: is it partly covered, or its diameter or height wrong in the profile?"
+    if found.ovalness > MAX_OVALNESS:
+        return "is not round: is it partly covered, smeared, or is there glare?"
     if found.strays > MAX_STRAYS:
         return "is not one colour on white: is it partly covered, or is there glare?"
     return None
