@@ -23,6 +23,9 @@ from hw_profiles.geometry import Array
 from hw_profiles.part import Part
 
 N_TURNS = 2  # bridges that go round the part more often than this are not considered
+# A finger's spine: the points of its centre line as seen from the core's centre. Columns: x, y, turns since the base, and the radius that
+# is solid about the point and about the link that follows it.
+TURNS, JOINT_RADIUS, LINK_RADIUS, N_SPINE = 2, 3, 4, 5
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -51,7 +54,7 @@ class RingArrays(NamedTuple):
 
 
 class Ring:
-    """The certificate for one hand and one part, ready to be asked every tick (about 5 µs)."""
+    """The certificate for one hand and one part, ready to be asked every tick (2–4 µs, and as much again to call it)."""
 
     def __init__(self, hand: HandModel, part: Part) -> None:
         self.hand = hand
@@ -67,35 +70,45 @@ class Ring:
 
     def certify(self, joints: Array, pose: Array) -> RingCertificate:
         """The certificate of a posture (n_joints,) about a part at `pose` (3,): mm, mm, rad."""
-        hand = self.hand.arrays
         gaps = np.empty(self.hand.n_fingers)
-        margin_mm = ring_margin(hand, self.arrays, centre_lines_kernel(hand, joints), pose, gaps)
+        margin_mm = _certify(self.hand.arrays, self.arrays, joints, pose, gaps)
         return RingCertificate(margin_mm > 0.0, margin_mm, gaps)
+
+
+@njit(cache=True)
+def _certify(hand: HandArrays, ring: RingArrays, joints: Array, pose: Array, gaps_mm: Array) -> float:
+    return ring_margin(hand, ring, centre_lines_kernel(hand, joints), pose, gaps_mm)
 
 
 @njit(cache=True)
 def ring_margin(hand: HandArrays, ring: RingArrays, lines_mm: Array, pose: Array, gaps_mm: Array) -> float:
     """Kernel of `Ring.certify`: fills `gaps_mm` and returns the margin, −passes_mm where no ring runs round the part."""
-    n = lines_mm.shape[0]
+    n, limit_mm = lines_mm.shape[0], 2.0 * ring.passes_mm
     cos, sin = math.cos(pose[2]), math.sin(pose[2])
     eye_x = pose[0] + cos * ring.centre_mm[0] - sin * ring.centre_mm[1]
     eye_y = pose[1] + sin * ring.centre_mm[0] + cos * ring.centre_mm[1]
-    seen, turns = np.empty(lines_mm.shape), np.zeros((n, MAX_LINKS + 1), np.int64)  # centre lines as seen from the core's centre
+    spine = np.empty((n, MAX_LINKS + 1, N_SPINE))
+    n_links = np.empty(n, np.int64)
     for f in range(n):
-        for k in range(hand.first[f + 1] - hand.first[f] + 1):
-            seen[f, k, 0], seen[f, k, 1] = lines_mm[f, k, 0] - eye_x, lines_mm[f, k, 1] - eye_y
-            if k > 0:
-                turns[f, k] = turns[f, k - 1] + _turn(seen[f, k - 1, 0], seen[f, k - 1, 1], seen[f, k, 0], seen[f, k, 1])
+        first, m = hand.first[f], hand.first[f + 1] - hand.first[f]
+        n_links[f] = m
+        for k in range(m + 1):
+            x, y = lines_mm[f, k, 0] - eye_x, lines_mm[f, k, 1] - eye_y
+            outer = hand.link_radius_mm[first + k] if k < m else hand.tip_radius_mm[f]
+            inner = hand.link_radius_mm[first + k - 1] if k > 0 else 0.0
+            before = spine[f, k - 1, TURNS] + _turn(spine[f, k - 1, 0], spine[f, k - 1, 1], x, y) if k > 0 else 0.0
+            spine[f, k, 0], spine[f, k, 1], spine[f, k, TURNS] = x, y, before
+            spine[f, k, JOINT_RADIUS], spine[f, k, LINK_RADIUS] = max(inner, outer), outer
     narrowest = np.empty((n, n, 2 * N_TURNS + 1))
-    narrowest[:] = 2.0 * ring.passes_mm
+    narrowest[:] = limit_mm
     for f in range(n):
         for g in range(n):
-            _lay_bridges(hand, ring, seen, turns, pose, f, g, narrowest)
+            _lay_bridges(ring, spine, n_links, limit_mm, pose, f, g, narrowest)
     for k in range(n):
         f, g = ring.order[k], ring.order[(k + 1) % n]
-        round_part = 1 if _bearing(seen[g, 0]) <= _bearing(seen[f, 0]) else 0
+        round_part = 1 if _bearing(spine[g, 0, 0], spine[g, 0, 1]) <= _bearing(spine[f, 0, 0], spine[f, 0, 1]) else 0
         gaps_mm[k] = min(narrowest[f, g, N_TURNS + round_part], narrowest[g, f, N_TURNS - round_part])
-    return ring.passes_mm - _widest_of_best_ring(narrowest, 2.0 * ring.passes_mm)
+    return ring.passes_mm - _widest_of_best_ring(narrowest, limit_mm)
 
 
 @njit(cache=True)
@@ -110,65 +123,51 @@ def _turn(ax: float, ay: float, bx: float, by: float) -> int:
 
 
 @njit(cache=True)
-def _bearing(point_mm: Array) -> float:
+def _bearing(x: float, y: float) -> float:
     """Bearing of a point in [0, 2π)."""
-    return math.atan2(point_mm[1], point_mm[0]) % (2.0 * math.pi)
+    return math.atan2(y, x) % (2.0 * math.pi)
 
 
 @njit(cache=True)
 def _lay_bridges(
-    hand: HandArrays, ring: RingArrays, seen: Array, turns: NDArray[np.int64], pose: Array, f: int, g: int, narrowest: Array
+    ring: RingArrays, spine: Array, n_links: NDArray[np.int64], limit_mm: float, pose: Array, f: int, g: int, narrowest: Array
 ) -> None:
-    """Bridges from every joint of finger f, and its tip, to the joints and the flanks of finger g."""
-    n_f, n_g = hand.first[f + 1] - hand.first[f], hand.first[g + 1] - hand.first[g]
-    for i in range(n_f + 1):
-        ax, ay = seen[f, i, 0], seen[f, i, 1]
-        r_f = _joint_radius(hand, f, i)
-        for j in range(n_g + 1):
-            bx, by = seen[g, j, 0], seen[g, j, 1]
-            turned = turns[f, i] - turns[g, j]
-            if f < g or (f == g and i + 1 < j):
-                gap, k = _bridge(ring, pose, ax, ay, bx, by, r_f, _joint_radius(hand, g, j), turned)
-                narrowest[f, g, k] = min(narrowest[f, g, k], gap)
-            if j == n_g or (f == g and (i == j or i == j + 1)):
-                continue
-            ux, uy = seen[g, j + 1, 0] - bx, seen[g, j + 1, 1] - by
-            square = ux * ux + uy * uy
-            share = (ax - bx) * ux + (ay - by) * uy
-            if 0.0 < share < square:
-                cx, cy = bx + ux * share / square, by + uy * share / square
-                r_g = hand.link_radius_mm[hand.first[g] + j]
-                gap, k = _bridge(ring, pose, ax, ay, cx, cy, r_f, r_g, turned - _turn(bx, by, cx, cy))
-                narrowest[f, g, k] = min(narrowest[f, g, k], gap)
+    """Bridges shorter than the limit from every joint of finger f, and its tip, to the joints and the flanks of finger g."""
+    narrow_mm, passes_mm = 2.0 * ring.radius_mm, ring.passes_mm
+    for i in range(n_links[f] + 1):
+        ax, ay, r_f = spine[f, i, 0], spine[f, i, 1], spine[f, i, JOINT_RADIUS]
+        for j in range(n_links[g] + 1):
+            for to_flank in range(2):
+                bx, by = spine[g, j, 0], spine[g, j, 1]
+                turned = spine[f, i, TURNS] - spine[g, j, TURNS]
+                if to_flank:
+                    if j == n_links[g] or (f == g and (i == j or i == j + 1)):
+                        continue
+                    ux, uy = spine[g, j + 1, 0] - bx, spine[g, j + 1, 1] - by
+                    square, along = ux * ux + uy * uy, (ax - bx) * ux + (ay - by) * uy
+                    if not 0.0 < along < square:
+                        continue
+                    cx, cy = bx + ux * along / square, by + uy * along / square
+                    turned -= _turn(bx, by, cx, cy)
+                    bx, by, r_g = cx, cy, spine[g, j, LINK_RADIUS]
+                else:
+                    if f > g or (f == g and i + 1 >= j):
+                        continue
+                    r_g = spine[g, j, JOINT_RADIUS]
+                length = math.sqrt((bx - ax) * (bx - ax) + (by - ay) * (by - ay))
+                gap = length - r_f - r_g
+                if gap >= limit_mm:
+                    continue
+                turned += _turn(ax, ay, bx, by)
+                if narrow_mm <= gap < passes_mm:
+                    turned += _straddled(ring, pose, ax, ay, bx, by, length, r_f, r_g)
+                k = N_TURNS + int(turned)
+                if 0 <= k <= 2 * N_TURNS and gap < narrowest[f, g, k]:
+                    narrowest[f, g, k] = gap
 
 
 @njit(cache=True)
-def _joint_radius(hand: HandArrays, f: int, k: int) -> float:
-    """Radius about the k-th point of a finger's centre line that is surely solid."""
-    n = hand.first[f + 1] - hand.first[f]
-    radius = hand.tip_radius_mm[f] if k == n else hand.link_radius_mm[hand.first[f] + k]
-    return radius if k == 0 else max(radius, hand.link_radius_mm[hand.first[f] + k - 1])
-
-
-@njit(cache=True)
-def _bridge(
-    ring: RingArrays, pose: Array, ax: float, ay: float, bx: float, by: float, r_a: float, r_b: float, turned: int
-) -> tuple[float, int]:
-    """Gap and class of turns of the bridge from a to b (relative to the core's centre); `turned`: turns of a less those of b."""
-    length = math.sqrt((bx - ax) ** 2 + (by - ay) ** 2)
-    gap = length - r_a - r_b
-    if gap >= 2.0 * ring.passes_mm:
-        return np.inf, 0
-    turned += _turn(ax, ay, bx, by)
-    if 2.0 * ring.radius_mm <= gap < ring.passes_mm:
-        turned += _straddled(ring, pose, ax, ay, bx, by, length, r_a, r_b)
-    return (gap, N_TURNS + turned) if -N_TURNS <= turned <= N_TURNS else (np.inf, 0)
-
-
-@njit(cache=True)
-def _straddled(
-    ring: RingArrays, pose: Array, ax: float, ay: float, bx: float, by: float, length: float, r_a: float, r_b: float
-) -> int:
+def _straddled(ring: RingArrays, pose: Array, ax: float, ay: float, bx: float, by: float, length: float, r_a: float, r_b: float) -> int:
     """Turns to add where the core straddles the bridge a–b with its centre on the side that its body is not held on.
 
     The core lies on the side of the bridge away from where its support lines at the chord meet; docs/model.md, section 4.
