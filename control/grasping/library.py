@@ -12,6 +12,7 @@ from control.grasping.grasp import Grasp, base_bearings
 from control.grasping.hold import FINGERS_APART_MM, LEFT_MM, Bench
 from control.grasping.primitives import Primitives, primitives_of
 from control.grasping.reach import PITCH, Node, Reach, flood
+from control.grasping.roadmap import Roadmap
 from control.grasping.templates import best_at
 from control.model.contact import PartShape
 from control.model.kinematics import HandModel
@@ -40,12 +41,14 @@ class Library:
     Attributes
     ----------
     reaches : one for each part angle of a 15° grid that has a grasp; one alone for a disc.
+    roadmap : how to get from one pose to another over all reaches; None for a disc, which any grasp may take up at any angle.
     park : joints (n_joints,) of the loose cage that a run starts from; the part may lie anywhere inside.
     is_round : the part looks the same at every angle, so a grasp may take it up at any.
     """
 
     bench: Bench
     reaches: tuple[Reach, ...]
+    roadmap: Roadmap | None
     park: Array
     is_round: bool
     loose_mm: float
@@ -58,7 +61,8 @@ class Library:
         if part.n_fold == 0:
             found = best_at(bench, 0.0)
             reaches = [] if found is None else [flood(bench, found, np.zeros(3))]
-        return cls(bench, tuple(reaches), park_posture(bench), part.n_fold == 0, loose_mm)
+        roadmap = Roadmap(tuple(reaches)) if reaches and part.n_fold else None
+        return cls(bench, tuple(reaches), roadmap, park_posture(bench), part.n_fold == 0, loose_mm)
 
     def options(self, pose: Pose2) -> list[Option]:
         """Every way to take the part up at a pose, best cage margin first."""

@@ -5,6 +5,7 @@ from __future__ import annotations
 import itertools
 import math
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
@@ -62,6 +63,18 @@ class Reach:
     def holds(self, pose: Array) -> bool:
         """Whether the whole cell around a pose (3,) can be held."""
         return self.cell_margin_mm(pose) > -math.inf
+
+    def holds_all(self, poses: Array) -> bool:
+        """Whether the cells around all poses (n, 3) can be held."""
+        index = np.floor((poses - self.origin) / PITCH + 1e-9).astype(np.int64)
+        held = self._held
+        if (index < 0).any() or (index >= held.shape).any():
+            return False
+        return bool(held[index[:, 0], index[:, 1], index[:, 2]].all())
+
+    @cached_property
+    def _held(self) -> NDArray[np.bool_]:
+        return self.held_cells()
 
     def yaw_near(self, yaw_rad: float) -> float:
         """The same direction, unwrapped to lie within half a turn of the lattice's middle."""

@@ -1,7 +1,7 @@
 """Distances between fingers, and between fingers and the part.
 
-A finger is a chain of capsules ending in a round tip; a part is a disc or a simple polygon. A signed distance is right outside the part
-and, inside it, to within the depth that a link's centre line stays outside (the fingers of a hand press a few mm, not whole links).
+A finger is a chain of capsules ending in a round tip; a part is a disc or a simple polygon. A distance is signed: negative where they
+overlap, and then no larger in size than the depth to which some point of the finger's centre line lies in the part, plus its radius.
 """
 
 from __future__ import annotations
@@ -140,8 +140,10 @@ def _nearest_on_link(a: Array, b: Array, radius_mm: float, outline_mm: Array, di
             touch[4] = distance - disc_mm - radius_mm
         return
     n = outline_mm.shape[0]
+    pierces = _is_inside(a[0], a[1], outline_mm) or _is_inside(b[0], b[1], outline_mm)
     for i in range(n):
         c, d = outline_mm[i], outline_mm[(i + 1) % n]
+        pierces = pierces or _cross(a, b, c, d)
         edge_x, edge_y = d[0] - c[0], d[1] - c[1]
         length = math.hypot(edge_x, edge_y)
         for which in range(4):  # least distance of two segments that do not cross: at an end of one of them
@@ -155,16 +157,49 @@ def _nearest_on_link(a: Array, b: Array, radius_mm: float, outline_mm: Array, di
                 qx, qy = q[0], q[1]
             gap_x, gap_y = px - qx, py - qy
             gap = math.hypot(gap_x, gap_y)
-            # The outward side of an edge is to its right.
-            is_inside = edge_y * gap_x - edge_x * gap_y < 0.0 and _is_inside(px, py, outline_mm)
-            signed = -gap if is_inside else gap
-            if signed - radius_mm < touch[4]:
-                touch[4] = signed - radius_mm
+            if gap - radius_mm < touch[4]:
+                touch[4] = gap - radius_mm
                 touch[0], touch[1] = qx, qy
-                if gap > 1e-6 and not is_inside:
+                if gap > 1e-6:
                     touch[2], touch[3] = gap_x / gap, gap_y / gap
                 else:
                     touch[2], touch[3] = edge_y / length, -edge_x / length
+    if pierces:
+        _deepest_on_link(a, b, radius_mm, outline_mm, touch)
+
+
+@njit(cache=True)
+def _deepest_on_link(a: Array, b: Array, radius_mm: float, outline_mm: Array, touch: Array) -> None:
+    """Of a link whose centre line runs through the polygon: how deep its ends and the points beside the corners and edges lie."""
+    n = outline_mm.shape[0]
+    for i in range(-2, 2 * n):
+        if i < 0:
+            px, py = (a[0], a[1]) if i == -2 else (b[0], b[1])
+        else:
+            c, d = outline_mm[i // 2], outline_mm[(i // 2 + 1) % n]
+            at = 0.5 * (i % 2)
+            px, py = _toward(c[0] + at * (d[0] - c[0]), c[1] + at * (d[1] - c[1]), a, b)
+        if not _is_inside(px, py, outline_mm):
+            continue
+        depth, qx, qy, edge = np.inf, 0.0, 0.0, 0
+        for k in range(n):
+            x, y = _toward(px, py, outline_mm[k], outline_mm[(k + 1) % n])
+            if math.hypot(px - x, py - y) < depth:
+                depth, qx, qy, edge = math.hypot(px - x, py - y), x, y, k
+        if -depth - radius_mm < touch[4]:
+            edge_x, edge_y = outline_mm[(edge + 1) % n, 0] - outline_mm[edge, 0], outline_mm[(edge + 1) % n, 1] - outline_mm[edge, 1]
+            length = math.hypot(edge_x, edge_y)
+            touch[4], touch[0], touch[1] = -depth - radius_mm, qx, qy
+            touch[2], touch[3] = edge_y / length, -edge_x / length
+
+
+@njit(cache=True)
+def _cross(a: Array, b: Array, c: Array, d: Array) -> bool:
+    """Whether segments a–b and c–d cross."""
+    ux, uy, vx, vy = b[0] - a[0], b[1] - a[1], d[0] - c[0], d[1] - c[1]
+    c_left, d_left = ux * (c[1] - a[1]) - uy * (c[0] - a[0]), ux * (d[1] - a[1]) - uy * (d[0] - a[0])
+    a_left, b_left = vx * (a[1] - c[1]) - vy * (a[0] - c[0]), vx * (b[1] - c[1]) - vy * (b[0] - c[0])
+    return (c_left > 0.0) != (d_left > 0.0) and (a_left > 0.0) != (b_left > 0.0)
 
 
 @njit(cache=True)

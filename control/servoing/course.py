@@ -3,21 +3,25 @@
 from __future__ import annotations
 
 import math
+from itertools import product
 
 import numpy as np
 
 from control.grasping.library import Library, Option
-from control.grasping.reach import Reach
+from control.grasping.reach import PITCH, Node, Reach
+from control.grasping.roadmap import Remaining
 from control.servoing.carry import ROLL, Carry
+from control.servoing.memory import Task
 from hw_profiles.geometry import Array, Pose2
 
 N_SAMPLES = 24  # of a straight way through a reach
 CENTRE_MM = 10.0  # strokes of a long turn are made this near to the palm centre
+WORTH_S = 0.3  # a regrasp must bring the goal nearer by this beyond its own cost
 
 
 def way_is_held(reach: Reach, start: Array, end: Array) -> bool:
     """Whether the grasp can hold all along the straight way between two ring poses (3,)."""
-    return all(reach.holds(start + s * (end - start)) for s in np.linspace(0.0, 1.0, N_SAMPLES))
+    return reach.holds_all(start + np.linspace(0.0, 1.0, N_SAMPLES)[:, None] * (end - start))
 
 
 def farthest_held(reach: Reach, start: Array, end: Array) -> Array:
@@ -31,44 +35,81 @@ def farthest_held(reach: Reach, start: Array, end: Array) -> Array:
     return last
 
 
-def next_ring(library: Library, carry: Carry, guide: Array) -> tuple[Array, bool]:
-    """The ring pose (3,) to go to next toward `guide` (3,), and whether that is the guide's own.
+def next_ring(library: Library, carry: Carry, task: Task) -> tuple[Array, bool]:
+    """The ring pose (3,) to go to next toward the task's guide, and whether that is the guide's own.
 
-    When the grasp cannot carry the part all the way: the position first, then as far round as it can; strokes of a turn are made near
-    the palm centre, where the reach is widest.
+    Straight there if the grasp can carry the part all the way, or by one corner; else as near as this grasp brings it.
     """
     reach = library.reaches[carry.reach_index]
-    wanted = carry.ring_for(guide)
+    wanted = carry.ring_for(task.guide)
     if way_is_held(reach, carry.ring, wanted):
         return wanted, True
-    for waypoint in (np.array([wanted[0], wanted[1], carry.ring[2]]), np.array([carry.ring[0], carry.ring[1], wanted[2]])):
-        if way_is_held(reach, carry.ring, waypoint) and way_is_held(reach, waypoint, wanted):
-            return (waypoint, False) if np.abs(waypoint - carry.ring).max() > 1e-6 else (wanted, True)
+    for corner in (np.array([wanted[0], wanted[1], carry.ring[2]]), np.array([carry.ring[0], carry.ring[1], wanted[2]])):
+        if way_is_held(reach, carry.ring, corner) and way_is_held(reach, corner, wanted):
+            return corner, False
+    if task.remaining is not None:
+        return _downhill(reach, carry, task.remaining), False
+    return _round_stroke(reach, carry, wanted), False
+
+
+def _downhill(reach: Reach, carry: Carry, remaining: Remaining) -> Array:
+    """Follow the cells of this reach from which the goal is nearer and nearer; the farthest that the straight way is held to."""
+    cell = reach.cell(carry.ring)
+    best = remaining.at(carry.reach_index, cell)
+    target = carry.ring
+    while True:
+        nearer = min(_around(cell), key=lambda other: remaining.at(carry.reach_index, other))
+        if remaining.at(carry.reach_index, nearer) >= best - 1e-9:
+            return target
+        best, cell = remaining.at(carry.reach_index, nearer), nearer
+        middle = reach.origin + PITCH * (np.array(cell) + 0.5)
+        if not way_is_held(reach, carry.ring, middle):
+            return target
+        target = middle
+
+
+def _around(cell: Node) -> list[Node]:
+    i, j, k = cell
+    return [(i + a, j + b, k + c) for a, b, c in product((-1, 0, 1), repeat=3) if abs(a) + abs(b) + abs(c) == 1]
+
+
+def _round_stroke(reach: Reach, carry: Carry, wanted: Array) -> Array:
+    """For a disc: the position first near the palm centre, where the reach is widest, then as far round as it can."""
     xy = carry.ring[:2]
     distance = float(np.linalg.norm(xy))
     central = xy * min(1.0, CENTRE_MM / distance) if distance > 0.0 else xy
-    turned = np.array([*central, wanted[2]])
     here = np.array([*central, carry.ring[2]])
     if distance > CENTRE_MM + 1.0 and way_is_held(reach, carry.ring, here):
-        return here, False
-    return farthest_held(reach, carry.ring, turned), False
+        return here
+    return farthest_held(reach, carry.ring, np.array([*central, wanted[2]]))
 
 
-def options_toward(library: Library, part: Array, guide: Array, held: Carry | None) -> tuple[Option, ...]:
-    """Ways to take the part up at `part` (3,), the one that promises most on the way to `guide` (3,) first.
-
-    First those that can carry it all the way, by their cage margin there; then by how far round they can take it.
-    """
+def options_toward(library: Library, part: Array, task: Task, held: Carry | None) -> tuple[Option, ...]:
+    """Ways to take the part up at `part` (3,), the one that promises most on the way to the task's guide first."""
+    options = library.options(Pose2(float(part[0]), float(part[1]), math.remainder(float(part[2]), 2.0 * math.pi)))
+    if task.remaining is not None:
+        return _nearest_first(library, options, task.remaining, held)
     ranked = []
-    for option in library.options(Pose2(float(part[0]), float(part[1]), math.remainder(float(part[2]), 2.0 * math.pi))):
+    for option in options:
         if held is not None and option.reach_index == held.reach_index and np.abs(option.ring - held.ring).max() < math.radians(8.0):
             continue
-        ranked.append((_promise(library, option, part, guide), option))
+        ranked.append((_promise(library, option, part, task.guide), option))
     ranked.sort(key=lambda pair: -pair[0])
     return tuple(option for _, option in ranked)
 
 
+def _nearest_first(library: Library, options: list[Option], remaining: Remaining, held: Carry | None) -> tuple[Option, ...]:
+    limit = math.inf
+    if held is not None:
+        limit = remaining.at(held.reach_index, library.reaches[held.reach_index].cell(held.ring)) - WORTH_S
+    timed = [(remaining.at(o.reach_index, library.reaches[o.reach_index].cell(o.ring)) - 0.02 * min(o.margin_mm, 5.0), o) for o in options]
+    timed = [(seconds, o) for seconds, o in timed if seconds < limit and (held is None or o.reach_index != held.reach_index)]
+    timed.sort(key=lambda pair: pair[0])
+    return tuple(option for _, option in timed)
+
+
 def _promise(library: Library, option: Option, part: Array, guide: Array) -> float:
+    """First what can carry the part all the way, by its cage margin there; then by how far round it can take it."""
     reach = library.reaches[option.reach_index]
     wanted = option.ring + np.where(np.isnan(guide), 0.0, guide - part) / ROLL
     if way_is_held(reach, option.ring, wanted):

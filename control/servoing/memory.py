@@ -8,6 +8,7 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 
 from control.grasping.library import Option
+from control.grasping.roadmap import Remaining
 from control.grasping.transfer import Path
 from control.servoing.carry import Carry
 from control.servoing.goals import Goal
@@ -88,13 +89,15 @@ class Task:
 
     target : (3,) where the part shall be, yaw unwrapped; nan where the goal leaves it free.
     guide : (3,) the same with the free coordinates kept where they were at the start.
-    within_since_us : since when the part has been within tolerance. n_regrasps, best_cost : to notice a lack of progress.
+    remaining : time to the target from everywhere, where the part's angle and the grasp's belong together.
+    within_since_us : since when the part has been within tolerance. n_regrasps : to notice a lack of progress.
     """
 
     goal: Goal
     started_us: int
     target: Array
     guide: Array
+    remaining: Remaining | None = None
     within_since_us: int | None = None
     n_regrasps: int = 0
 

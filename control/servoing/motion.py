@@ -50,7 +50,7 @@ def advance(controller: Controller, memory: Memory, observation: Observation | N
         case Seek() as seek if sight is not None and sight.lost_since_us is None:
             return _seek(controller, memory, seek, sight)
         case Still() if sight is not None and sight.lost_since_us is None and memory.task is not None:
-            options = course.options_toward(controller.library, sight.measured, memory.task.guide, None)
+            options = course.options_toward(controller.library, sight.measured, memory.task, None)
             return replace(memory, motion=Seek(options, None))
     return memory
 
@@ -100,7 +100,7 @@ def _carry(controller: Controller, memory: Memory, carry: Carry, sight: Sight, e
     library, task = controller.library, memory.task
     wanted, is_final = carry.ring, True
     if task is not None and sight.lost_since_us is None:
-        wanted, is_final = course.next_ring(library, carry, task.guide)
+        wanted, is_final = course.next_ring(library, carry, task)
         if not is_final and np.all(np.abs(wanted - carry.ring) < ARRIVED):
             return _regrasp(controller, memory, carry, sight, task)
     ring = slewed(carry.ring, wanted, controller.tip_speed_mm_per_s, controller.turn_speed_rad_per_s, elapsed_s)
@@ -116,7 +116,7 @@ def _regrasp(controller: Controller, memory: Memory, carry: Carry, sight: Sight,
     since_us = next((at for at, ring in carry.trail if np.all(np.abs(ring - carry.ring) < ARRIVED)), memory.now_us)
     if memory.now_us - since_us < controller.limits.settle_s * 1e6:
         return replace(memory, motion=carry.steer(carry.ring, memory.now_us))
-    options = course.options_toward(controller.library, sight.measured, task.guide, carry)
+    options = course.options_toward(controller.library, sight.measured, task, carry)
     return replace(memory, motion=Seek(options, carry))
 
 
