@@ -7,6 +7,7 @@ PalmloopError
 ├─ RecordingError                unreadable, truncated beyond repair, wrong schema version
 └─ DeviceError                   a device that is missing, busy or broken
    ├─ DeviceTimeout(TimeoutError)
+   ├─ DeviceEnded                a file of frames that has been read to its end
    └─ WireError                  framing, checksum
 
 They know nothing of HTTP or exit codes; one table in each outer surface maps class to status.
@@ -63,6 +64,10 @@ class DeviceError(PalmloopError):
 
 class DeviceTimeout(DeviceError, TimeoutError):
     """A device that did not answer in its time."""
+
+
+class DeviceEnded(DeviceError):
+    """A source with an end, such as a video file, that has reached it."""
 
 
 class WireError(DeviceError):

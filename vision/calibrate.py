@@ -67,6 +67,19 @@ def detect(board: Board, pixels: Pixels, name: str) -> View | None:
     return View(name, known, np.asarray(corners, dtype=float).reshape(-1, 2))
 
 
+def is_new(view: View, before: list[View]) -> bool:
+    """Whether a view shows the board elsewhere or otherwise than every view before, by a twentieth of its own size."""
+    span = float(np.ptp(view.in_image_px, axis=0).max())
+    for other in before:
+        shared = {tuple(point): index for index, point in enumerate(other.on_board_mm.tolist())}
+        pairs = [(i, shared[tuple(p)]) for i, p in enumerate(view.on_board_mm.tolist()) if tuple(p) in shared]
+        if len(pairs) >= 4:
+            mine, theirs = np.array(pairs).T
+            if np.linalg.norm(view.in_image_px[mine] - other.in_image_px[theirs], axis=1).mean() < 0.05 * span:
+                return False
+    return True
+
+
 def guidance(views: list[View], size_px: tuple[int, int]) -> str:
     """What the next picture should show; empty when there is enough."""
     seen = _tiles(views, size_px)
