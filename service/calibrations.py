@@ -9,6 +9,7 @@ from pathlib import Path
 from hw_profiles import calibration
 from hw_profiles.calibration import Calibration, ColourCalibration, LensCalibration, PlateCalibration
 from hw_profiles.errors import Problem, ProfileError
+from hw_profiles.part import Spots
 from hw_profiles.rig import Rig
 
 KINDS: dict[str, type[Calibration]] = {"lens": LensCalibration, "plate": PlateCalibration, "colour": ColourCalibration}
@@ -71,7 +72,8 @@ def calibrated(rig: Rig, folder: Path, today: datetime.date) -> Calibrated:
         camera = calibration.with_plate(camera, plate, today)
     if isinstance(colours, ColourCalibration):
         calibration.check(colours, camera, today)
-    missing = tuple(kind for kind, found in zip(KINDS, (lens, plate, colours), strict=True) if found is None)
+    needed = ("lens", "plate", "colour") if isinstance(rig.part.fiducial, Spots) else ("lens", "plate")
+    missing = tuple(kind for kind, found in zip(KINDS, (lens, plate, colours), strict=True) if found is None and kind in needed)
     return Calibrated(rig.model_copy(update={"camera": camera}), colours if isinstance(colours, ColourCalibration) else None, missing)
 
 

@@ -166,8 +166,10 @@ class Renderer:
         facing = np.sum(normal * (np.array(self.camera.mount.eye_mm[:2]) - outline), axis=1) > 0.0
         top, foot = self._model.project_plane(outline, self.part.height_mm), self._model.project_plane(outline, 0.0)
         quads = np.stack([foot, np.roll(foot, -1, axis=0), np.roll(top, -1, axis=0), top], axis=1)[facing]
+        if len(quads) == 0:
+            return
         low, high = self._box(quads.reshape(-1, 2))
-        if len(quads) == 0 or np.any(high <= low):
+        if np.any(high <= low):
             return
         light = 0.72 + 0.28 * normal[facing] @ LIGHT[:2] / math.hypot(LIGHT[0], LIGHT[1])
         cover, shade = np.zeros((2, high[1] - low[1], high[0] - low[0]), np.uint8)
