@@ -13,13 +13,17 @@ from control.grasping.hold import FINGERS_APART_MM, LEFT_MM, Bench
 from control.grasping.primitives import Primitives, primitives_of
 from control.grasping.reach import PITCH, Node, Reach, flood
 from control.grasping.roadmap import Roadmap
-from control.grasping.templates import best_at
+from control.grasping.templates import ranked_at
+from control.grasping.transfer import Speeds, transfer
 from control.model.contact import PartShape
 from control.model.kinematics import HandModel
 from hw_profiles.geometry import Array, Pose2
 from hw_profiles.part import Part
 
 ANGLE_STEP_RAD = math.radians(15.0)
+N_GRASPS = 3  # kept for one part angle
+N_TRIED = 12
+NEW_SHARE = 0.15  # of the poses held so far that a further grasp must add
 PARK_PHASES_RAD = np.radians(np.arange(0.0, 95.0, 5.0))
 PARK_OPENINGS_MM = (16.0, 14.0, 12.0, 10.0, 8.0, 6.0, 4.0, 3.0, 2.0)
 PARK_MARGIN_MM = 2.0
@@ -57,12 +61,10 @@ class Library:
     def of(cls, hand: HandModel, part: Part, margin_mm: float, loose_mm: float) -> Library:
         """Search, check and flood; takes about a second. `margin_mm` is what the cage certificate must show, −inf for none."""
         bench = Bench.of(hand, part, margin_mm)
-        reaches = [] if part.n_fold == 0 else _reaches_over(bench, 2.0 * math.pi / part.n_fold)
-        if part.n_fold == 0:
-            found = best_at(bench, 0.0)
-            reaches = [] if found is None else [flood(bench, found, np.zeros(3))]
+        park = park_posture(bench)
+        reaches = _reaches_over(bench, park, 2.0 * math.pi / part.n_fold) if part.n_fold else _reaches_at(bench, park, 0.0, 1)
         roadmap = Roadmap(tuple(reaches)) if reaches and part.n_fold else None
-        return cls(bench, tuple(reaches), roadmap, park_posture(bench), part.n_fold == 0, loose_mm)
+        return cls(bench, tuple(reaches), roadmap, park, part.n_fold == 0, loose_mm)
 
     def options(self, pose: Pose2) -> list[Option]:
         """Every way to take the part up at a pose, best cage margin first."""
@@ -120,22 +122,37 @@ class Library:
         return _cached_primitives(self, reach_index, cell)
 
 
-def _reaches_over(bench: Bench, period_rad: float) -> list[Reach]:
-    """One reach for each part angle of the grid; a symmetric part is searched over one period only, and that is turned on."""
+def _reaches_over(bench: Bench, park: Array, period_rad: float) -> list[Reach]:
+    """Reaches for each part angle of the grid; a symmetric part is searched over one period only, and that is turned on."""
     n_steps = max(1, round(period_rad / ANGLE_STEP_RAD))
-    n_periods = round(2.0 * math.pi / period_rad)
+    first = [reach for step in range(n_steps) for reach in _reaches_at(bench, park, -math.pi + step * period_rad / n_steps, N_GRASPS)]
     reaches = []
-    for step in range(n_steps):
-        yaw = -math.pi + step * period_rad / n_steps
-        grasp = best_at(bench, yaw)
-        if grasp is None:
-            continue
-        first = flood(bench, grasp, np.array([0.0, 0.0, yaw]))
-        reaches.append(first)
-        for k in range(1, n_periods):
-            turn = np.array([0.0, 0.0, k * period_rad])
-            reaches.append(Reach(grasp.turned(-k * period_rad), first.origin + turn, first.margin_mm, first.joints))
+    for k in range(round(2.0 * math.pi / period_rad)):
+        turn = np.array([0.0, 0.0, k * period_rad])
+        reaches.extend(Reach(r.grasp.turned(-k * period_rad), r.origin + turn, r.margin_mm, r.joints) for r in first)
     return reaches
+
+
+def _reaches_at(bench: Bench, park: Array, yaw_rad: float, n: int) -> list[Reach]:
+    """Up to n grasps for the part at the palm centre that the fingers get into from the park posture, each with its reach.
+
+    A grasp after the first is kept if it adds poses that those before it cannot hold.
+    """
+    centre = np.array([0.0, 0.0, yaw_rad])
+    found: list[Reach] = []
+    covered = None
+    for grasp in ranked_at(bench, yaw_rad)[:N_TRIED]:
+        if transfer(bench, park, None, (grasp, centre), Pose2(0.0, 0.0, yaw_rad), 1.0, Speeds()) is None:
+            continue
+        reach = flood(bench, grasp, centre)
+        held = reach.held_cells()
+        if covered is not None and np.count_nonzero(held & ~covered) < NEW_SHARE * np.count_nonzero(covered):
+            continue
+        covered = held if covered is None else covered | held
+        found.append(reach)
+        if len(found) == n:
+            break
+    return found
 
 
 @lru_cache(maxsize=512)

@@ -69,8 +69,8 @@ def _jaw_candidates(bench: Bench) -> list[Grasp]:
     return grasps
 
 
-def best_at(bench: Bench, part_yaw_rad: float) -> Grasp | None:
-    """The grasp for the part near the palm centre, turned by `part_yaw_rad`, that promises the widest reach.
+def ranked_at(bench: Bench, part_yaw_rad: float) -> list[Grasp]:
+    """Grasps for the part near the palm centre, turned by `part_yaw_rad`, the one that promises the widest reach first.
 
     Those that hold best at the centre are probed around it: moved a little and turned a little each way.
     """
@@ -81,13 +81,12 @@ def best_at(bench: Bench, part_yaw_rad: float) -> Grasp | None:
         if hold is not None:
             held.append((_worth(bench, hold), grasp, hold))
     held.sort(key=lambda entry: -entry[0])
-    best, best_score = None, 0.0
+    ranked = []
     for _, grasp, hold in held[:: max(1, len(held) // (4 * N_PROBED))][:N_PROBED]:
         probes = [bench.hold(grasp, centre + probe, hold.joints) for probe in PROBES]
-        score = sum(1.0 + _worth(bench, probe) for probe in probes if probe is not None)
-        if score > best_score:
-            best, best_score = grasp, score
-    return best
+        ranked.append((sum(1.0 + _worth(bench, probe) for probe in probes if probe is not None), grasp))
+    ranked.sort(key=lambda entry: -entry[0])
+    return [grasp for _, grasp in ranked]
 
 
 def _worth(bench: Bench, hold: Hold) -> float:
