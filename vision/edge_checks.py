@@ -244,22 +244,33 @@ def _best_correlation(
     best, best_score = around.copy(), -2.0
     n = centres.shape[0]
     share = white.sum() / n
+    # To first order about the middle of the tag the image is an affine picture of the plane: a search needs no more.
+    cos, sin = math.cos(around[2]), math.sin(around[2])
+    mid_x, mid_y = centres[:, 0].mean(), centres[:, 1].mean()
+    about_x, about_y = around[0] + cos * mid_x - sin * mid_y, around[1] + sin * mid_x + cos * mid_y
+    u_mid, v_mid, ux, uy, vx, vy = project_with_slope(lens, motion, about_x, about_y, z_mm)
+    du, dv = np.empty(n), np.empty(n)
     for turn in range(-n_turns, n_turns + 1):
         yaw = around[2] + turn * step_rad
         cos, sin = math.cos(yaw), math.sin(yaw)
+        for k in range(n):
+            x = around[0] + cos * centres[k, 0] - sin * centres[k, 1] - about_x
+            y = around[1] + sin * centres[k, 0] + cos * centres[k, 1] - about_y
+            du[k], dv[k] = u_mid - u_0 + ux * x + uy * y, v_mid - v_0 + vx * x + vy * y
         for i in range(-n_steps, n_steps + 1):
             for j in range(-n_steps, n_steps + 1):
-                x_0, y_0 = around[0] + i * step_mm, around[1] + j * step_mm
+                u_off, v_off = step_mm * (ux * i + uy * j), step_mm * (vx * i + vy * j)
                 total, squares, product = 0.0, 0.0, 0.0
                 for k in range(n):
-                    x, y = cos * centres[k, 0] - sin * centres[k, 1], sin * centres[k, 0] + cos * centres[k, 1]
-                    u, v, _, _, _, _ = project_with_slope(lens, motion, x_0 + x, y_0 + y, z_mm)
-                    value = max(bilinear(grey, u - u_0, v - v_0), 0.0)
+                    column, row = int(du[k] + u_off + 0.5), int(dv[k] + v_off + 0.5)
+                    value = 0.0
+                    if 0 <= row < grey.shape[0] and 0 <= column < grey.shape[1]:
+                        value = float(grey[row, column])
                     total += value
                     squares += value * value
                     product += value * ((1.0 if white[k] else 0.0) - share)
                 score = product / math.sqrt(max(squares - total * total / n, 1.0))
                 if score > best_score:
                     best_score = score
-                    best[0], best[1], best[2] = x_0, y_0, yaw
+                    best[0], best[1], best[2] = around[0] + i * step_mm, around[1] + j * step_mm, yaw
     return best
