@@ -16,7 +16,7 @@ from hw_profiles.errors import DeviceError, Problem, ProfileError
 from service.rig import simulated_stage
 from service.simulated.variation import Variation
 from service.trials import figures
-from service.trials.run import Result, TrialRun, run_trial
+from service.trials.run import Result, Stage, TrialRun, run_trial
 from service.trials.spec import TrialSpec
 
 
@@ -74,7 +74,7 @@ def _spec(**options: object) -> TrialSpec:
         raise ProfileError(problems) from error
 
 
-def _with_progress(console: Console, spec: TrialSpec, stage: "Stage") -> TrialRun:  # noqa: F821
+def _with_progress(console: Console, spec: TrialSpec, stage: Stage) -> TrialRun:
     columns = (TextColumn("{task.description}"), BarColumn(), MofNCompleteColumn(), TimeElapsedColumn(), TextColumn("{task.fields[last]}"))
     with Progress(*columns, console=console, transient=True) as progress:
         bar = progress.add_task("goals", total=spec.goals * spec.repeats, last="")

@@ -27,7 +27,7 @@ def simulated_stage(rig: Rig, variation: Variation, seed: int) -> Stage:
         bench.place(controller.library.park, drawn_start(controller, rng))
         loop.memory = Memory(now_us=bench.clock.now_us())
 
-    return Stage(loop, bench.truth, lambda: bench.world.escaped, restart)
+    return Stage(loop, bench.truth, lambda: bench.world.has_escaped, restart)
 
 
 def drawn_start(controller: Controller, rng: np.random.Generator) -> Pose2:
