@@ -121,19 +121,22 @@ def _tip_spans(
             for turn in (at - half, at + half):
                 t = length * (ux * math.cos(turn) + uy * math.sin(turn))
                 if (end == 0 and (t < first or edge == 0.0)) or (end == 1 and t > last and edge > 0.0):
-                    ends[k] = turn % (2.0 * math.pi)
+                    ends[k] = turn
                     k += 1
     if k < 2:
         along = min(max(ux * length, first), last)
         is_within = (ux * along + uy * offset - length) ** 2 + (uy * along - ux * offset) ** 2 < r * r
         return -1 if k == 0 and is_within else 0
-    for i in range(k):
-        ends[i] %= 2.0 * math.pi
-    ends[:k].sort()
+    for i in range(k):  # insertion sort, from 0 to 2π
+        turn, j = ends[i] % (2.0 * math.pi), i
+        while j > 0 and ends[j - 1] > turn:
+            ends[j] = ends[j - 1]
+            j -= 1
+        ends[j] = turn
     middle = 0.5 * (ends[0] + ends[1])
     mx, my = length * math.cos(middle), length * math.sin(middle)
     along = min(max(ux * mx + uy * my, first), last)
-    start = 0 if (ux * along + uy * offset - mx) ** 2 + (uy * along - ux * offset) ** 2 < r * r else 1
+    start = 0 if (ux * along + uy * offset - mx) ** 2 + (uy * along - ux * offset - my) ** 2 < r * r else 1
     for i in range(k // 2):
         a, b = ends[(2 * i + start) % k], ends[(2 * i + start + 1) % k]
         out[n + i, 0], out[n + i, 1] = a, (b - a) % (2.0 * math.pi)
@@ -141,7 +144,9 @@ def _tip_spans(
 
 
 @njit(cache=True)
-def blocked_slides(x: float, y: float, ux: float, uy: float, radius: float, tip: float, outline_mm: Array, disc_mm: float, out: Array) -> int:
+def blocked_slides(
+    x: float, y: float, ux: float, uy: float, radius: float, tip: float, outline_mm: Array, disc_mm: float, out: Array
+) -> int:
     """Lengths [mm] at which a link sliding out of (x, y) along the unit vector u runs into the part; see `blocked_turns`."""
     n, m = 0, outline_mm.shape[0]
     entry = np.inf

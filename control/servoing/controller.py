@@ -21,13 +21,14 @@ class Limits:
     """When the loop waits, gives up or faults.
 
     stale_ms : age of the newest frame beyond which no pulses go out. lost_s : how long the part may be unseen while a goal is under
-    way. silent_ms : how long a board with telemetry may be silent. settle_s : wait after the fingers closed or a stroke ended.
+    way. silent_ms : how long a board with telemetry may be silent. wake_ms : how long after arming the board is not yet judged. settle_s : wait after the fingers closed or a stroke ended.
     max_regrasps_per_turn : grasps anew for one revolution before the loop says that it makes no progress.
     """
 
     stale_ms: float = 150.0
     lost_s: float = 3.0
     silent_ms: float = 300.0
+    wake_ms: float = 200.0
     settle_s: float = 0.12
     max_regrasps_per_turn: int = 24
 

@@ -123,6 +123,7 @@ class Memory:
     state: State = State.DISARMED
     why: str = "not armed yet"
     faults: tuple[str, ...] = ()
+    armed_at_us: int = 0
     joints: Array | None = None
     motion: Motion = field(default_factory=Still)
     task: Task | None = None

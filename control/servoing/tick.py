@@ -120,7 +120,8 @@ def _arm(controller: Controller, memory: Memory) -> Memory:
         duration_s = float((np.abs(joints[1] - joints[0]) / (0.25 * controller.hand.speed)).max())
         if duration_s > 0.0:
             moving = Follow(Path(np.array([0.0, duration_s]), joints, -math.inf), memory.now_us, None)
-    return replace(memory, state=state, why="armed; the fingers form the loose cage", joints=start, motion=moving)
+    why = "armed; the fingers form the loose cage"
+    return replace(memory, state=state, why=why, joints=start, motion=moving, armed_at_us=memory.now_us)
 
 
 def _begin(controller: Controller, memory: Memory, goal: Goal, notes: Notes) -> Memory:

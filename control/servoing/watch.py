@@ -18,6 +18,8 @@ def faults(controller: Controller, memory: Memory, inputs: Inputs) -> tuple[str,
         return ()
     found = [reason for reason in (_stale(controller, memory), _lost(controller, memory), _left(controller, memory)) if reason]
     board, limits = inputs.board, controller.limits
+    if memory.now_us - memory.armed_at_us < limits.wake_ms * 1e3:
+        board = None  # it may still speak of the time before it was armed
     if board is not None and board.silent_ms > limits.silent_ms:
         found.append(
             f"the servo board has been silent for {board.silent_ms:.0f} ms, allowed {limits.silent_ms:.0f}: check its cable and supply"

@@ -1,0 +1,204 @@
+"""Elastic energy of a hand about a part: how hard the servos are pushed off their targets to make room for it.
+
+E(pose | command) = Σ over fingers of the least joint energy of a posture that clears the part (eq. 1 of docs/model.md). A joint pushed d off
+its target costs H(d) = k d²/2 up to the stall torque τ = k d, then τ |d| − τ²/2k (eq. 2). Fingers may pass through each other here, so
+where fingers would overlap E is a lower bound; `contact.fingers_apart` tells of the command itself.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numba import njit
+
+from control.model.contact import PartShape
+from control.model.finger_energy import finger_least, is_far
+from control.model.kinematics import HandArrays, HandModel, centre_lines_kernel
+from hw_profiles.errors import CommandError
+from hw_profiles.geometry import Array, Pose2
+from hw_profiles.part import Part
+
+
+@dataclass(frozen=True, eq=False)
+class PoseGrid:
+    """Poses of the part on a regular grid: x, y [mm] and yaw [rad], each read-only and ascending."""
+
+    x_mm: Array
+    y_mm: Array
+    yaw_rad: Array
+
+    @classmethod
+    def square(cls, half_mm: float, n: int, yaw_rad: float | Array = 0.0) -> PoseGrid:
+        """n × n positions out to ±half_mm, at one yaw or several."""
+        ticks = np.linspace(-half_mm, half_mm, n)
+        yaws = np.atleast_1d(np.asarray(yaw_rad, dtype=float))
+        for array in (ticks, yaws):
+            array.setflags(write=False)
+        return cls(ticks, ticks, yaws)
+
+    @property
+    def shape(self) -> tuple[int, int, int]:
+        """(n_x, n_y, n_yaw)."""
+        return len(self.x_mm), len(self.y_mm), len(self.yaw_rad)
+
+    def pose(self, index: tuple[int, int, int]) -> Pose2:
+        """The pose of one cell."""
+        i, j, k = index
+        return Pose2(float(self.x_mm[i]), float(self.y_mm[j]), float(self.yaw_rad[k]))
+
+
+@dataclass(frozen=True, eq=False)
+class Yielding:
+    """How a hand at a command yields to the part at a pose: energy [mJ], and the joints (n_joints,) it is pushed to."""
+
+    energy_mj: float
+    joints: Array
+
+
+class Energy:
+    """Elastic energy of one hand about one part."""
+
+    def __init__(self, hand: HandModel, part: Part) -> None:
+        self.hand = hand
+        self.shape = PartShape.of(part)
+        self.corners_mm, self.disc_mm = self.shape.edges()
+        self.reach_mm = part.circumradius_mm
+
+    def at(self, command: Array, pose: Pose2) -> Yielding:
+        """Energy and posture for one pose; the energy is inf, the joints the command's, where no posture clears the part.
+
+        Raises
+        ------
+        CommandError
+            If a command lies outside its joint's limits.
+        """
+        joints = np.empty(self.hand.n_joints)
+        energy = energy_at(
+            self.hand.arrays, self.springs, self.checked(command), pose.as_array(), self.corners_mm, self.disc_mm, self.reach_mm, joints
+        )
+        return Yielding(float(energy), joints)
+
+    def over(self, command: Array, grid: PoseGrid) -> Array:
+        """Energies (n_x, n_y, n_yaw) [mJ] over a grid of poses, read-only; inf where no posture clears the part.
+
+        Raises
+        ------
+        CommandError
+            If a command lies outside its joint's limits.
+
+        Notes
+        -----
+        Eq. (1) of docs/model.md. Cost O(cells · fingers · edges), and a few more for each joint beyond the first.
+        """
+        values = np.empty(grid.shape)
+        energy_over(
+            self.hand.arrays,
+            self.springs,
+            self.checked(command),
+            grid.x_mm,
+            grid.y_mm,
+            grid.yaw_rad,
+            self.corners_mm,
+            self.disc_mm,
+            self.reach_mm,
+            values,
+        )
+        values.setflags(write=False)
+        return values
+
+    def gradient(self, command: Array, pose: Pose2) -> Array:
+        """∂E/∂(x, y, yaw) (3,) [mJ/mm, mJ/mm, mJ/rad] by central differences; minus it is the push on the part [N, N, N·mm]."""
+        middle, steps = pose.as_array(), (GRADIENT_MM, GRADIENT_MM, GRADIENT_MM / self.reach_mm)
+        gradient = np.empty(3)
+        for axis, step in enumerate(steps):
+            shift = np.zeros(3)
+            shift[axis] = step
+            ahead, behind = (self.at(command, Pose2(*(middle + sign * shift))).energy_mj for sign in (1.0, -1.0))
+            gradient[axis] = (ahead - behind) / (2.0 * step)
+        return gradient
+
+    @property
+    def springs(self) -> Array:
+        """(n_joints, 2) stiffness and stall of every joint."""
+        return np.stack([self.hand.stiffness, self.hand.stall], axis=1)
+
+    def checked(self, command: Array) -> Array:
+        """The command (n_joints,) itself, if it lies within the limits."""
+        command = np.asarray(command, dtype=float)
+        if command.shape != (self.hand.n_joints,):
+            raise CommandError(f"command has shape {command.shape}; allowed: ({self.hand.n_joints},), one value a joint")
+        for index, value in enumerate(command):
+            low, high = self.hand.low[index], self.hand.high[index]
+            if not low - 1e-9 <= value <= high + 1e-9:
+                raise CommandError(f"joint {index} of hand '{self.hand.hand.name}': {value:.4f} is outside {low:.4f} … {high:.4f}")
+        return np.clip(command, self.hand.low, self.hand.high)
+
+
+GRADIENT_MM = 0.05
+
+
+@njit(cache=True)
+def energy_at(
+    hand: HandArrays, springs: Array, command: Array, pose: Array, corners_mm: Array, disc_mm: float, reach_mm: float, joints: Array
+) -> float:
+    """Kernel of `Energy.at`; fills `joints`."""
+    lines = centre_lines_kernel(hand, command)
+    joints[:] = command
+    total = 0.0
+    for f in range(hand.base_mm.shape[0]):
+        a, b = hand.first[f], hand.first[f + 1]
+        if is_far(lines[f], b - a, hand.link_radius_mm[a:b].max(), hand.tip_radius_mm[f], pose, reach_mm):
+            continue
+        chain = finger_chain(hand, springs, command, f)
+        total += finger_least(chain, hand.base_mm[f], hand.base_yaw_rad[f], hand.tip_radius_mm[f], pose, corners_mm, disc_mm, joints[a:b])
+        if total == np.inf:
+            joints[:] = command
+            return total
+    return total
+
+
+@njit(cache=True)
+def energy_over(
+    hand: HandArrays,
+    springs: Array,
+    command: Array,
+    x_mm: Array,
+    y_mm: Array,
+    yaw_rad: Array,
+    corners_mm: Array,
+    disc_mm: float,
+    reach_mm: float,
+    values: Array,
+) -> None:
+    """Kernel of `Energy.over`."""
+    lines = centre_lines_kernel(hand, command)
+    values[:] = 0.0
+    pose, pushed = np.empty(3), np.empty(3)
+    for f in range(hand.base_mm.shape[0]):
+        a, b = hand.first[f], hand.first[f + 1]
+        chain, thickest = finger_chain(hand, springs, command, f), hand.link_radius_mm[a:b].max()
+        for i in range(x_mm.shape[0]):
+            for j in range(y_mm.shape[0]):
+                pose[0], pose[1] = x_mm[i], y_mm[j]
+                if is_far(lines[f], b - a, thickest, hand.tip_radius_mm[f], pose, reach_mm):
+                    continue
+                for k in range(yaw_rad.shape[0]):
+                    pose[2] = yaw_rad[k]
+                    if values[i, j, k] < np.inf:
+                        values[i, j, k] += finger_least(
+                            chain, hand.base_mm[f], hand.base_yaw_rad[f], hand.tip_radius_mm[f], pose, corners_mm, disc_mm, pushed
+                        )
+
+
+@njit(cache=True)
+def finger_chain(hand: HandArrays, springs: Array, command: Array, f: int) -> Array:
+    """One finger's joints as rows (n, 8): slides, link length, radius, low, high, stiffness, stall, command."""
+    a, n = hand.first[f], hand.first[f + 1] - hand.first[f]
+    chain = np.empty((n, 8))
+    for j in range(n):
+        k = a + j
+        chain[j, 0] = 1.0 if hand.is_slide[k] else 0.0
+        chain[j, 1], chain[j, 2], chain[j, 3], chain[j, 4] = hand.link_mm[k], hand.link_radius_mm[k], hand.low[k], hand.high[k]
+        chain[j, 5], chain[j, 6], chain[j, 7] = springs[k, 0], springs[k, 1], command[k]
+    return chain
