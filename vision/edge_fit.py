@@ -29,6 +29,7 @@ N_ROUNDS = 24
 SETTLED_MM, SETTLED_RAD = 1e-4, 1e-5  # a smaller step ends the fit
 LOOSE_MM = 3e-3  # a larger step after the last round means there is no pose to be had
 LEAST_GAIN = 0.2
+UNSETTLED = -1
 INLIER_PX = 0.45  # an edge this close to where the pose puts it agrees with the pose
 MIN_AGREEING = 14
 MIN_CONTRAST = 12.0  # grey levels across an edge, below which it is noise
@@ -110,8 +111,8 @@ class EdgeFit:
     samples: Array
 
 
-def fit(model: CameraModel, grey: Pixels, corner_px: tuple[int, int], template: EdgeTemplate, z_mm: float, start: Pose2) -> EdgeFit | None:
-    """The pose near `start` that the edges agree on; None when too few are seen to place the tag at all.
+def fit(model: CameraModel, grey: Pixels, corner_px: tuple[int, int], template: EdgeTemplate, z_mm: float, start: Pose2) -> EdgeFit | NoFit:
+    """The pose near `start` that the edges agree on, or why there is none.
 
     Parameters
     ----------
@@ -124,8 +125,10 @@ def fit(model: CameraModel, grey: Pixels, corner_px: tuple[int, int], template: 
         grey, corner_px[0], corner_px[1], model.lens, model.motion, z_mm, template.points, template.normals, template.cell_mm,
         start.as_array(), samples,
     )  # fmt: skip
+    if n_agreeing == UNSETTLED:
+        return NoFit("has edges that agree on no one pose: is the part tipping, or the tag bent, blurred or covered?")
     if n_agreeing < MIN_AGREEING:
-        return None
+        return NoFit("shows no edges where it was expected: is it covered, out of the image or too dark?")
     return EdgeFit(Pose2.from_array(pose), covariance, float(residual), samples)
 
 
@@ -182,7 +185,7 @@ def _gauss_newton(
     start: Array,
     samples: Array,
 ) -> tuple[Array, Array, float, int]:
-    """Pose (3,), covariance (3, 3), RMS of agreeing edges [px] and their number (0: no pose); fills samples (n, 6)."""
+    """Pose (3,), covariance (3, 3), RMS of agreeing edges [px] and their number (0 or UNSETTLED: no pose); fills samples (n, 6)."""
     pose = start.copy()
     _, _, ux, uy, vx, vy = project_with_slope(lens, motion, pose[0], pose[1], z_mm)
     cell_px = cell_mm * math.sqrt(abs(ux * vy - uy * vx))
@@ -216,7 +219,7 @@ def _gauss_newton(
         bleed_px += step[3]
         moved = abs(step[0]) + abs(step[1]) + abs(step[2]) * SETTLED_MM / SETTLED_RAD
     if moved > LOOSE_MM:
-        return pose, matrix, 0.0, 0
+        return pose, matrix, 0.0, UNSETTLED
     covariance = np.linalg.inv(matrix)[:3, :3] * max(rms, EDGE_SD_PX) ** 2
     return pose, covariance, rms, n_agreeing  # type: ignore[return-value]  # numpy: LinAlg answers any float
 

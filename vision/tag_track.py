@@ -17,7 +17,7 @@ from hw_profiles.part import Fiducial, Part
 from vision import edge_checks, edge_fit, fiducial, pose_filter
 from vision.camera_model import CameraModel
 from vision.edge_checks import Quality
-from vision.edge_fit import EdgeFit, EdgeTemplate
+from vision.edge_fit import EdgeFit, EdgeTemplate, NoFit
 from vision.fiducial import Finder, Sighting
 from vision.frames import Frame, Pixels
 from vision.pose_filter import Belief
@@ -25,7 +25,8 @@ from vision.pose_filter import Belief
 MAX_BLUR_CELLS = 0.36  # more, and neighbouring edges pull at each other
 SURE_CELLS, SURE_EDGES = 0.72, 0.5  # a tag seen so well needs no prediction to vouch for it
 LEAST_CONSISTENT = 0.7
-MAX_TILT_RAD = math.radians(6.0)
+MAX_TILT_RAD = math.radians(5.0)
+TILT_SDS = 3.0  # standard deviations a tilt must stand out by to be believed
 COAST_US = 400_000  # a prediction older than this is no place to look
 POSITION_FLOOR_MM, YAW_FLOOR_RAD = 0.004, 0.0004  # standard deviations below which calibration, not noise, decides
 CUT_SIDES = 0.95  # half width of the cut-out, of the tag's side: holds the tag at any angle
@@ -104,8 +105,8 @@ class TagTrack:
     def _fit(self, cut: Cut, start: Pose2) -> tuple[Pose2, Array] | NoPose:
         tag, height = self.tag, self.part.height_mm
         found = edge_fit.fit(self._model, *cut, self._template, height, start)
-        if found is None:
-            return NoPose(f"tag {tag.id} shows no edges where it was expected: is it covered, out of the image or too dark?")
+        if isinstance(found, NoFit):
+            return NoPose(f"tag {tag.id} {found.reason}")
         self.quality = edge_checks.judge(self._model, *cut, self._template, height, found)
         wrong = fault(found, self.quality)
         if wrong is not None:
@@ -158,6 +159,6 @@ def fault(found: EdgeFit, quality: Quality) -> str | None:
     sd_rad = math.sqrt(found.covariance[2, 2])
     if sd_mm > 0.1 or sd_rad > math.radians(0.5):
         return f"is only placed to {sd_mm:.2f} mm, {math.degrees(sd_rad):.2f} deg: is it covered or too small in the image?"
-    if quality.tilt_rad - 4.0 * quality.tilt_sd_rad > MAX_TILT_RAD:
+    if quality.tilt_rad > max(MAX_TILT_RAD, TILT_SDS * quality.tilt_sd_rad):
         return f"stands {math.degrees(quality.tilt_rad):.0f} deg off the plate: the part is tipping, or the camera has moved"
     return None

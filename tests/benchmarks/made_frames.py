@@ -15,6 +15,7 @@ from hw_profiles.geometry import Array, Pose2
 from hw_profiles.load import load_camera, load_hand, load_part
 from hw_profiles.part import Part
 from service.simulated.camera import Renderer
+from vision import pattern
 from vision.camera_model import model_of
 from vision.frames import Frame, Pixels
 
@@ -108,3 +109,34 @@ class Bench:
         poses, twists = motion(rng, n)
         for index in range(n):
             yield Pose2.from_array(poses[index]), self.frame(index, poses[index], twists[index], spoiled)
+
+
+def leaning_tag(camera: Camera, part: Part, pose: Pose2, lean_rad: float, about_rad: float) -> Pixels:
+    """A grey picture of the part's tag alone, its plane leaning about an axis through the tag's middle; four samples a pixel each way."""
+    model, tag, fine = model_of(camera), part.fiducial, 4
+    hand_from_tag = pose @ tag.part_from_tag
+    axis = np.array([math.cos(about_rad), math.sin(about_rad), 0.0])
+    flat_x = np.array([math.cos(hand_from_tag.yaw_rad), math.sin(hand_from_tag.yaw_rad), 0.0])
+    flat_y = np.array([-flat_x[1], flat_x[0], 0.0])
+    along_x, along_y = (
+        v * math.cos(lean_rad) + np.cross(axis, v) * math.sin(lean_rad) + axis * (axis @ v) * (1.0 - math.cos(lean_rad))
+        for v in (flat_x, flat_y)
+    )
+    middle = np.array([*hand_from_tag.xy_mm, part.height_mm])
+    turn, shift = model.motion[:, :3], model.motion[:, 3]
+    plane_from_pinhole = np.linalg.inv(np.stack([turn @ along_x, turn @ along_y, turn @ middle + shift], axis=1))
+    pixels = np.full((camera.height_px, camera.width_px), 150.0)
+    u, v = model.project(middle)
+    reach = int(tag.size_mm * model.px_per_mm(hand_from_tag.xy_mm, part.height_mm))
+    steps = (np.arange(2 * reach * fine) + 0.5) / fine - 0.5
+    columns, rows = np.meshgrid(int(u) - reach + steps, int(v) - reach + steps)
+    ideal = model.undistort(np.stack([columns, rows], axis=-1))
+    on_plane = ideal @ plane_from_pinhole[:, :2].T + plane_from_pinhole[:, 2]
+    cell = on_plane[..., :2] / on_plane[..., 2:] / (tag.size_mm / pattern.N_CELLS) + pattern.N_CELLS / 2
+    column, row = np.floor(cell[..., 0]).astype(int), pattern.N_CELLS - 1 - np.floor(cell[..., 1]).astype(int)
+    lowest, highest = np.minimum(column, row), np.maximum(column, row)
+    code = np.where(pattern.cells(tag.id)[np.clip(row, 0, 7), np.clip(column, 0, 7)], 225.0, 32.0)
+    value = np.where((lowest >= 0) & (highest < 8), code, np.where((lowest >= -1) & (highest <= 8), 225.0, 150.0))
+    mean = value.reshape(2 * reach, fine, 2 * reach, fine).mean(axis=(1, 3))
+    pixels[int(v) - reach : int(v) + reach, int(u) - reach : int(u) + reach] = mean
+    return np.round(cv2.GaussianBlur(pixels, (0, 0), 0.5)).astype(np.uint8)
