@@ -111,6 +111,13 @@ class EdgeFit:
     samples: Array
 
 
+@dataclass(frozen=True, slots=True)
+class NoFit:
+    """Why the edges place the tag nowhere; continues a sentence that begins with the tag."""
+
+    reason: str
+
+
 def fit(model: CameraModel, grey: Pixels, corner_px: tuple[int, int], template: EdgeTemplate, z_mm: float, start: Pose2) -> EdgeFit | NoFit:
     """The pose near `start` that the edges agree on, or why there is none.
 
