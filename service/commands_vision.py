@@ -6,7 +6,7 @@ import datetime
 import json
 import math
 from pathlib import Path
-from typing import Annotated
+from typing import Annotated, Literal
 
 import numpy as np
 import typer
@@ -22,7 +22,7 @@ from hw_profiles.rig import Rig
 from service import calibrations, sources, tracking
 from service.ports import Camera
 from vision import calibrate as lens_maths
-from vision import calibrate_plate, print_board, teach
+from vision import calibrate_plate, print_board, print_mark, teach
 from vision.calibrate import Board, View
 from vision.camera_model import model_of
 from vision.tracker import Tracker
@@ -42,11 +42,19 @@ def board(
     square_mm: Annotated[float, typer.Option(help="side of a square", min=5.0, max=80.0)] = 22.0,
 ) -> None:
     """Print the calibration board at true scale."""
-    form = out.suffix.lower()
-    if form not in (".pdf", ".png"):
-        raise ProfileError([Problem("calibrate board", "OUT", repr(str(out)), "allowed: a name ending in .pdf or .png")])
-    _write(out, print_board.board_sheet(_board(square_mm), "pdf" if form == ".pdf" else "png"))
+    _write(out, print_board.board_sheet(_board(square_mm), _sheet_form(out, "calibrate board")))
     Console(highlight=False).print(f"✔ {out}: print at 100 % and check that the bar measures 100 mm; glue the sheet on something flat")
+
+
+@calibrate.command("mark")
+def mark(
+    out: Annotated[Path, typer.Argument(help="file to write, .pdf or .png")],
+    part: Annotated[str, typer.Option("--part", help="whose tag or spots: shipped name or TOML file")] = "roller-40",
+) -> None:
+    """Print a part's tag or coloured spots at true scale."""
+    form = _sheet_form(out, "calibrate mark")
+    _write(out, print_mark.mark_sheet(load.load_part(part), form))
+    Console(highlight=False).print(f"✔ {out}: print at 100 % on matt paper; glue it flat on the part as its profile says")
 
 
 @calibrate.command("camera")
@@ -260,6 +268,13 @@ def _numbers(text: str, n: int, option: str, form: str) -> list[float]:
     if len(values) != n or not all(math.isfinite(value) for value in values):
         raise ProfileError([Problem("calibrate", option, repr(text), f"allowed: {form}, numbers parted by commas")])
     return values
+
+
+def _sheet_form(out: Path, command: str) -> Literal["pdf", "png"]:
+    form = out.suffix.lower()
+    if form not in (".pdf", ".png"):
+        raise ProfileError([Problem(command, "OUT", repr(str(out)), "allowed: a name ending in .pdf or .png")])
+    return "pdf" if form == ".pdf" else "png"
 
 
 def _board(square_mm: float) -> Board:

@@ -96,8 +96,12 @@ def guidance(views: list[View], size_px: tuple[int, int]) -> str:
     return ""
 
 
-def solve_lens(views: list[View], camera: Camera, made_from: str, made_on: datetime.date) -> LensCalibration:
+def solve_lens(
+    views: list[View], camera: Camera, made_from: str, made_on: datetime.date, bad_view_times: float = BAD_VIEW_TIMES
+) -> LensCalibration:
     """Intrinsics of a camera from views of a board.
+
+    bad_view_times : views with so many times the median residual are put aside; inf keeps all.
 
     Raises
     ------
@@ -111,7 +115,7 @@ def solve_lens(views: list[View], camera: Camera, made_from: str, made_on: datet
         _refuse_poor(kept, rejected, size_px)
         rms, matrix, distortion, sds, per_view = _solve(kept, size_px)
         worst = int(np.argmax(per_view))
-        if per_view[worst] <= max(BAD_VIEW_TIMES * float(np.median(per_view)), BAD_VIEW_PX):
+        if per_view[worst] <= max(bad_view_times * float(np.median(per_view)), BAD_VIEW_PX):
             break
         rejected.append(kept.pop(worst).name)
     if rms > MAX_RMS_PX:

@@ -2,6 +2,9 @@
 
 A code of 6 × 6 cells inside a black border one cell wide (Olson, AprilTag, ICRA 2011; Wang & Olson, AprilTag 2, IROS 2016). The
 tag needs a white margin one cell wide around the border.
+
+Upright is as OpenCV draws the family; some other programs draw the same codes turned by 180 degrees, and a tag printed by those
+reads half a turn off: set angle_deg = 180 in the part's profile, or print the tag with `palmloop calibrate mark`.
 """
 
 from __future__ import annotations

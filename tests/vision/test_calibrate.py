@@ -13,7 +13,7 @@ from hw_profiles.errors import CalibrationError, ProfileError
 from hw_profiles.geometry import Pose2
 from hw_profiles.load import load_camera, load_part
 from tests.benchmarks.made_frames import camera_of
-from vision import calibrate, calibrate_plate, print_board
+from vision import calibrate, calibrate_plate, pattern, print_board, print_mark
 from vision.calibrate import Board, View
 from vision.camera_model import model_of
 
@@ -109,6 +109,18 @@ def test_the_sheet_is_a_pdf_of_the_right_size() -> None:
     box = sheet[sheet.index(b"/MediaBox") :].split(b"]")[0].split(b"[")[1].split()
     assert float(box[2]) == pytest.approx(width_pt, abs=0.01)
     assert print_board.board_sheet(BOARD, "pdf") == sheet
+
+
+@pytest.mark.parametrize("name", ["roller-40", "bracket-l"])
+def test_a_printed_tag_is_found_upright_and_of_the_right_size(name: str) -> None:
+    part = load_part(name)
+    sheet = cv2.imdecode(np.frombuffer(print_mark.mark_sheet(part, "png"), np.uint8), cv2.IMREAD_GRAYSCALE)
+    corners, ids, _ = cv2.aruco.ArucoDetector(pattern.family()).detectMarkers(np.asarray(sheet))
+    assert np.ravel(ids).tolist() == [part.fiducial.id]
+    quad = np.asarray(corners[0]).reshape(4, 2)
+    side_px = part.fiducial.size_mm * 600 / 25.4
+    np.testing.assert_allclose(quad[1] - quad[0], [side_px, 0.0], atol=3.0)
+    np.testing.assert_allclose(quad[3] - quad[0], [0.0, side_px], atol=3.0)
 
 
 def moved_camera() -> Camera:
