@@ -34,10 +34,6 @@ class PartShape:
         """A disc, for instance the circumcircle of a part."""
         return cls(np.zeros((0, 2)), radius_mm)
 
-    def edges(self) -> tuple[Array, float]:
-        """The part as a ring of inflated edges: corners (m, 2) and their radius [mm]; for a disc one edge from its centre to itself."""
-        return (np.zeros((1, 2)), self.radius_mm) if self.radius_mm > 0.0 else (self.outline_mm, 0.0)
-
 
 @dataclass(frozen=True, eq=False)
 class Clearances:

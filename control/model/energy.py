@@ -1,7 +1,7 @@
 """Elastic energy of a hand about a part: how hard the servos are pushed off their targets to make room for it.
 
-E(pose | command) = Σ over fingers of the least joint energy of a posture that clears the part (eq. 1 of docs/model.md). A joint pushed d off
-its target costs H(d) = k d²/2 up to the stall torque τ = k d, then τ |d| − τ²/2k (eq. 2). Fingers may pass through each other here, so
+E(pose | command) = Σ over fingers of the least joint energy of a posture that clears the part (eq. 1 of docs/model.md). A joint pushed d
+off its target costs H(d) = k d²/2 up to the stall torque τ = k d, then τ |d| − τ²/2k (eq. 2). Fingers may pass through each other here, so
 where fingers would overlap E is a lower bound; `contact.fingers_apart` tells of the command itself.
 """
 
@@ -12,9 +12,9 @@ from dataclasses import dataclass
 import numpy as np
 from numba import njit
 
-from control.model.contact import PartShape
-from control.model.finger_energy import finger_least, is_far
-from control.model.kinematics import HandArrays, HandModel, centre_lines_kernel
+from control.model.finger_energy import finger_chain, finger_least, is_far, working_room
+from control.model.kinematics import MAX_LINKS, HandArrays, HandModel, centre_lines_kernel
+from control.model.pieces import Pieces, pieces_of
 from hw_profiles.errors import CommandError
 from hw_profiles.geometry import Array, Pose2
 from hw_profiles.part import Part
@@ -61,8 +61,7 @@ class Energy:
 
     def __init__(self, hand: HandModel, part: Part) -> None:
         self.hand = hand
-        self.shape = PartShape.of(part)
-        self.corners_mm, self.disc_mm = self.shape.edges()
+        self.pieces = pieces_of(part)
         self.reach_mm = part.circumradius_mm
 
     def at(self, command: Array, pose: Pose2) -> Yielding:
@@ -74,9 +73,7 @@ class Energy:
             If a command lies outside its joint's limits.
         """
         joints = np.empty(self.hand.n_joints)
-        energy = energy_at(
-            self.hand.arrays, self.springs, self.checked(command), pose.as_array(), self.corners_mm, self.disc_mm, self.reach_mm, joints
-        )
+        energy = energy_at(self.hand.arrays, self.springs, self.checked(command), pose.as_array(), self.pieces, self.reach_mm, joints)
         return Yielding(float(energy), joints)
 
     def over(self, command: Array, grid: PoseGrid) -> Array:
@@ -99,8 +96,7 @@ class Energy:
             grid.x_mm,
             grid.y_mm,
             grid.yaw_rad,
-            self.corners_mm,
-            self.disc_mm,
+            self.pieces,
             self.reach_mm,
             values,
         )
@@ -139,22 +135,21 @@ GRADIENT_MM = 0.05
 
 
 @njit(cache=True)
-def energy_at(
-    hand: HandArrays, springs: Array, command: Array, pose: Array, corners_mm: Array, disc_mm: float, reach_mm: float, joints: Array
-) -> float:
+def energy_at(hand: HandArrays, springs: Array, command: Array, pose: Array, pieces: Pieces, reach_mm: float, joints: Array) -> float:
     """Kernel of `Energy.at`; fills `joints`."""
     lines = centre_lines_kernel(hand, command)
     joints[:] = command
-    total = 0.0
+    total, shifts = 0.0, np.zeros(MAX_LINKS)
     for f in range(hand.base_mm.shape[0]):
         a, b = hand.first[f], hand.first[f + 1]
-        if is_far(lines[f], b - a, hand.link_radius_mm[a:b].max(), hand.tip_radius_mm[f], pose, reach_mm):
+        if is_far(lines[f], b - a, max(hand.link_radius_mm[a:b].max(), hand.tip_radius_mm[f]), pose, reach_mm):
             continue
-        chain = finger_chain(hand, springs, command, f)
-        total += finger_least(chain, hand.base_mm[f], hand.base_yaw_rad[f], hand.tip_radius_mm[f], pose, corners_mm, disc_mm, joints[a:b])
+        chain, spans = finger_chain(hand, springs, command, f), working_room(b - a, pieces)
+        total += finger_least(chain, hand.base_mm[f], hand.base_yaw_rad[f], pose, pieces, spans, shifts)
         if total == np.inf:
             joints[:] = command
             return total
+        joints[a:b] += shifts[: b - a]
     return total
 
 
@@ -166,39 +161,24 @@ def energy_over(
     x_mm: Array,
     y_mm: Array,
     yaw_rad: Array,
-    corners_mm: Array,
-    disc_mm: float,
+    pieces: Pieces,
     reach_mm: float,
     values: Array,
 ) -> None:
     """Kernel of `Energy.over`."""
     lines = centre_lines_kernel(hand, command)
     values[:] = 0.0
-    pose, pushed = np.empty(3), np.empty(3)
+    pose, shifts = np.empty(3), np.zeros(MAX_LINKS)
     for f in range(hand.base_mm.shape[0]):
         a, b = hand.first[f], hand.first[f + 1]
-        chain, thickest = finger_chain(hand, springs, command, f), hand.link_radius_mm[a:b].max()
+        chain, spans = finger_chain(hand, springs, command, f), working_room(b - a, pieces)
+        thickest = max(hand.link_radius_mm[a:b].max(), hand.tip_radius_mm[f])
         for i in range(x_mm.shape[0]):
             for j in range(y_mm.shape[0]):
                 pose[0], pose[1] = x_mm[i], y_mm[j]
-                if is_far(lines[f], b - a, thickest, hand.tip_radius_mm[f], pose, reach_mm):
+                if is_far(lines[f], b - a, thickest, pose, reach_mm):
                     continue
                 for k in range(yaw_rad.shape[0]):
                     pose[2] = yaw_rad[k]
                     if values[i, j, k] < np.inf:
-                        values[i, j, k] += finger_least(
-                            chain, hand.base_mm[f], hand.base_yaw_rad[f], hand.tip_radius_mm[f], pose, corners_mm, disc_mm, pushed
-                        )
-
-
-@njit(cache=True)
-def finger_chain(hand: HandArrays, springs: Array, command: Array, f: int) -> Array:
-    """One finger's joints as rows (n, 8): slides, link length, radius, low, high, stiffness, stall, command."""
-    a, n = hand.first[f], hand.first[f + 1] - hand.first[f]
-    chain = np.empty((n, 8))
-    for j in range(n):
-        k = a + j
-        chain[j, 0] = 1.0 if hand.is_slide[k] else 0.0
-        chain[j, 1], chain[j, 2], chain[j, 3], chain[j, 4] = hand.link_mm[k], hand.link_radius_mm[k], hand.low[k], hand.high[k]
-        chain[j, 5], chain[j, 6], chain[j, 7] = springs[k, 0], springs[k, 1], command[k]
-    return chain
+                        values[i, j, k] += finger_least(chain, hand.base_mm[f], hand.base_yaw_rad[f], pose, pieces, spans, shifts)

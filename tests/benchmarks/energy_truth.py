@@ -72,7 +72,9 @@ class FingerTruth:
             return 0.0
         starts = [self.command]
         for spread in (0.1, 0.25, 0.5, 0.8, 1.0)[: N_STARTS - 1]:
-            starts.append(np.clip(self.command + spread * rng.uniform(-1.0, 1.0, len(self.command)) * (self.high - self.low), self.low, self.high))
+            starts.append(
+                np.clip(self.command + spread * rng.uniform(-1.0, 1.0, len(self.command)) * (self.high - self.low), self.low, self.high)
+            )
         return min(self.descend(start) for start in starts)
 
     def descend(self, start: Array) -> float:
