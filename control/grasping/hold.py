@@ -21,6 +21,8 @@ from hw_profiles.part import Part
 MIN_CLOSURE = 0.05
 LEFT_MM = 0.8  # greatest distance by which a finger may miss its place: it is compliant
 FINGERS_APART_MM = 1.0
+OPEN_MM = 1.5  # how far fingers open, at least, to change grasp
+OPEN_MARGIN_MM = 1.0  # least cage margin while they are open, where a cage is required
 
 
 class Demands(NamedTuple):
@@ -121,16 +123,20 @@ def flood_kernel(
     start: NDArray[np.int64],
     home: Array,
     margins_mm: Array,
+    open_margins_mm: Array,
     joints: Array,
 ) -> None:
-    """Fill margins (n_x, n_y, n_yaw) and joints (n_x, n_y, n_yaw, n_joints) outward from a start node; unheld nodes stay as given."""
+    """Fill margins (n_x, n_y, n_yaw) and joints (n_x, n_y, n_yaw, n_joints) outward from a start node; unheld nodes stay as given.
+
+    The open margins are those with every finger OPEN_MM off the part: what a regrasp goes through.
+    """
     n_x, n_y, n_yaw = margins_mm.shape
     seen = np.zeros((n_x, n_y, n_yaw), np.bool_)
     queue = np.empty((n_x * n_y * n_yaw, 6), np.int64)  # node, and the neighbour whose joints to start from
     queue[0, :3], queue[0, 3] = start, -1
     seen[start[0], start[1], start[2]] = True
     head, tail = 0, 1
-    pose = np.empty(3)
+    pose, gaps = np.empty(3), np.empty(hand.base_mm.shape[0])
     while head < tail:
         i, j, k = queue[head, 0], queue[head, 1], queue[head, 2]
         near = home if queue[head, 3] < 0 else joints[queue[head, 3], queue[head, 4], queue[head, 5]]
@@ -141,6 +147,8 @@ def flood_kernel(
             continue
         margins_mm[i, j, k] = margin_mm
         joints[i, j, k] = found
+        opened, _, _ = place_about(hand, outline_mm, disc_mm, contacts_mm, normals, turns_rad, pose, OPEN_MM, found)
+        open_margins_mm[i, j, k] = ring_margin(hand, demands.ring, centre_lines_kernel(hand, opened), pose, gaps)
         for axis in range(3):
             for step in (-1, 1):
                 a, b, c = i + (step if axis == 0 else 0), j + (step if axis == 1 else 0), k + (step if axis == 2 else 0)

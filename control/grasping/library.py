@@ -63,7 +63,7 @@ class Library:
         bench = Bench.of(hand, part, margin_mm)
         park = park_posture(bench)
         reaches = _reaches_over(bench, park, 2.0 * math.pi / part.n_fold) if part.n_fold else _reaches_at(bench, park, 0.0, 1)
-        roadmap = Roadmap(tuple(reaches)) if reaches and part.n_fold else None
+        roadmap = Roadmap(tuple(reaches), bench) if reaches and part.n_fold else None
         return cls(bench, tuple(reaches), roadmap, park, part.n_fold == 0, loose_mm)
 
     def options(self, pose: Pose2) -> list[Option]:
@@ -126,10 +126,10 @@ def _reaches_over(bench: Bench, park: Array, period_rad: float) -> list[Reach]:
     """Reaches for each part angle of the grid; a symmetric part is searched over one period only, and that is turned on."""
     n_steps = max(1, round(period_rad / ANGLE_STEP_RAD))
     first = [reach for step in range(n_steps) for reach in _reaches_at(bench, park, -math.pi + step * period_rad / n_steps, N_GRASPS)]
-    reaches = []
+    reaches: list[Reach] = []
     for k in range(round(2.0 * math.pi / period_rad)):
         turn = np.array([0.0, 0.0, k * period_rad])
-        reaches.extend(Reach(r.grasp.turned(-k * period_rad), r.origin + turn, r.margin_mm, r.joints) for r in first)
+        reaches.extend(Reach(r.grasp.turned(-k * period_rad), r.origin + turn, r.margin_mm, r.open_margin_mm, r.joints) for r in first)
     return reaches
 
 

@@ -29,12 +29,14 @@ class Reach:
     ----------
     origin : (3,) pose of lattice node (0, 0, 0): mm, mm, rad; yaw is not wrapped.
     margin_mm : (n_x, n_y, n_yaw) cage margin at each node; −inf where the grasp cannot hold.
+    open_margin_mm : the same with the fingers opened a little, as a change of grasp needs it.
     joints : (n_x, n_y, n_yaw, n_joints) of the touching grasp there; nan where it cannot hold.
     """
 
     grasp: Grasp
     origin: Array
     margin_mm: Array
+    open_margin_mm: Array
     joints: Array
 
     def cell(self, pose: Array) -> Node:
@@ -49,16 +51,13 @@ class Reach:
             return -math.inf
         return float(self.margin_mm[i : i + 2, j : j + 2, k : k + 2].min())
 
-    def cell_margins_mm(self) -> Array:
-        """Least margin over each cell's corners (n_x − 1, n_y − 1, n_yaw − 1)."""
-        m = self.margin_mm
-        n_x, n_y, n_yaw = m.shape
-        shifted = [m[a : n_x - 1 + a, b : n_y - 1 + b, c : n_yaw - 1 + c] for a, b, c in CORNERS]
-        return np.asarray(np.minimum.reduce(shifted))
-
     def held_cells(self) -> NDArray[np.bool_]:
         """Which cells can be held (n_x − 1, n_y − 1, n_yaw − 1)."""
-        return self.cell_margins_mm() > -np.inf
+        return _least_over_corners(self.margin_mm) > -np.inf
+
+    def openable_cells(self, margin_mm: float) -> NDArray[np.bool_]:
+        """Which cells can be held, and let go of with a cage margin left (n_x − 1, n_y − 1, n_yaw − 1)."""
+        return self.held_cells() & (_least_over_corners(self.open_margin_mm) >= margin_mm)
 
     def holds(self, pose: Array) -> bool:
         """Whether the whole cell around a pose (3,) can be held."""
@@ -93,6 +92,12 @@ class Reach:
         return float(self.origin[2] + low * PITCH[2]), float(self.origin[2] + high * PITCH[2])
 
 
+def _least_over_corners(values: Array) -> Array:
+    n_x, n_y, n_yaw = values.shape
+    shifted = [values[a : n_x - 1 + a, b : n_y - 1 + b, c : n_yaw - 1 + c] for a, b, c in CORNERS]
+    return np.asarray(np.minimum.reduce(shifted))
+
+
 def flood(bench: Bench, grasp: Grasp, start: Array) -> Reach:
     """The connected set of poses that a grasp can hold, outward from a ring pose (3,) that it can hold.
 
@@ -100,7 +105,7 @@ def flood(bench: Bench, grasp: Grasp, start: Array) -> Reach:
     """
     shape = tuple(2 * n + 1 for n in N_HALF)
     origin = start - PITCH * np.array(N_HALF)
-    margins = np.full(shape, -np.inf)
+    margins, open_margins = np.full(shape, -np.inf), np.full(shape, -np.inf)
     joints = np.full((*shape, bench.hand.n_joints), np.nan)
     flood_kernel(
         bench.hand.arrays,
@@ -115,8 +120,9 @@ def flood(bench: Bench, grasp: Grasp, start: Array) -> Reach:
         np.array(N_HALF),
         bench.hand.home,
         margins,
+        open_margins,
         joints,
     )
-    for array in (origin, margins, joints):
+    for array in (origin, margins, open_margins, joints):
         array.setflags(write=False)
-    return Reach(grasp, origin, margins, joints)
+    return Reach(grasp, origin, margins, open_margins, joints)

@@ -15,7 +15,9 @@ from numpy.typing import NDArray
 from scipy.sparse import csr_array
 from scipy.sparse.csgraph import dijkstra
 
+from control.grasping.hold import OPEN_MARGIN_MM, Bench
 from control.grasping.reach import PITCH, Node, Reach
+from control.model.kinematics import HandModel
 from hw_profiles.geometry import Array
 
 STEP_S = np.array([0.13, 0.13, 0.08])  # to carry the part by one cell
@@ -40,10 +42,11 @@ class Remaining:
 class Roadmap:
     """The graph of the cells of all reaches of a library."""
 
-    def __init__(self, reaches: tuple[Reach, ...]) -> None:
-        self.reaches = reaches
+    def __init__(self, reaches: tuple[Reach, ...], bench: Bench) -> None:
+        self.reaches, self._bench = reaches, bench
         self._held = [reach.held_cells() for reach in reaches]
-        ids, n_cells = [], 0
+        ids: list[NDArray[np.int64]] = []
+        n_cells = 0
         for held in self._held:
             numbered = np.full(held.shape, -1)
             numbered[held] = n_cells + np.arange(held.sum())
@@ -59,24 +62,32 @@ class Roadmap:
                 rows.append(a[both])
                 columns.append(b[both])
                 weights.append(np.full(int(both.sum()), STEP_S[axis]))
-        hubs, n_hubs = self._hubs()
-        rows.append(np.arange(n_cells))
+        cells, hubs, n_hubs = self._hubs()
+        rows.append(cells)
         columns.append(n_cells + hubs)
-        weights.append(np.full(n_cells, REGRASP_S / 2.0))
+        weights.append(np.full(len(cells), REGRASP_S / 2.0))
         row, column = np.concatenate(rows), np.concatenate(columns)
         n = n_cells + n_hubs
         self._graph = csr_array((np.concatenate(weights), (row, column)), shape=(n, n))
 
-    def _hubs(self) -> tuple[NDArray[np.int64], int]:
-        """Number of the pose hub of every cell: position on the common lattice, angle modulo a turn."""
-        keys = []
-        for reach, held in zip(self.reaches, self._held, strict=True):
-            centres = (reach.origin + PITCH * (np.argwhere(held) + 0.5)) / PITCH
-            index = np.floor(centres).astype(np.int64)
+    def _hubs(self) -> tuple[NDArray[np.int64], NDArray[np.int64], int]:
+        """Cells at which the fingers can change grasp, and the number of the hub of each.
+
+        A hub stands for a pose on the common lattice, angle modulo a turn, and for the side that the fingers wrap the part from: they
+        cannot pass from one side to the other around a part without opening the cage.
+        """
+        required = self._bench.demands.margin_mm > -math.inf
+        keys, cells = [], []
+        for reach, numbered in zip(self.reaches, self._ids, strict=True):
+            openable = reach.openable_cells(OPEN_MARGIN_MM if required else -math.inf)
+            centres = reach.origin + PITCH * (np.argwhere(openable) + 0.5)
+            index = np.floor(centres / PITCH).astype(np.int64)
             index[:, 2] %= N_YAW
-            keys.append(index)
+            side = wrap_side(reach, centres, self._bench.hand) if required else np.zeros(len(centres), dtype=np.int64)
+            keys.append(np.column_stack([index, side]))
+            cells.append(numbered[openable])
         _, number = np.unique(np.concatenate(keys), axis=0, return_inverse=True)
-        return number.ravel(), int(number.max()) + 1
+        return np.concatenate(cells), number.ravel(), int(number.max(initial=-1)) + 1
 
     def remaining(self, goal: Array) -> Remaining:
         """Seconds to a goal pose (3,) from every cell; a yaw of nan stands for any angle."""
@@ -84,8 +95,7 @@ class Roadmap:
         for reach, numbered in zip(self.reaches, self._ids, strict=True):
             yaw = reach.origin[2] if math.isnan(goal[2]) else reach.yaw_near(float(goal[2]))
             i, j, k = reach.cell(np.array([goal[0], goal[1], yaw]))
-            n_x, n_y, n_yaw = numbered.shape
-            if 0 <= i < n_x and 0 <= j < n_y and 0 <= k < n_yaw:
+            if all(0 <= place < n for place, n in zip((i, j, k), numbered.shape, strict=True)):
                 found = numbered[i, j] if math.isnan(goal[2]) else numbered[i, j, k : k + 1]
                 goals.extend(int(one) for one in found[found >= 0])
         if not goals:
@@ -93,3 +103,15 @@ class Roadmap:
         seconds = dijkstra(self._graph, directed=False, indices=goals, min_only=True)[: self._n_cells]
         padded = np.append(seconds, np.inf)
         return Remaining(tuple(padded[numbered] for numbered in self._ids))
+
+
+def wrap_side(reach: Reach, rings: Array, hand: HandModel) -> NDArray[np.int64]:
+    """From which side the fingers wrap the part at ring poses (n, 3): +1 or −1, the sign of the contacts' mean phase.
+
+    The phase of a contact is its bearing about the part less the bearing of its finger's base.
+    """
+    points = reach.grasp.points_mm
+    bearings = np.arctan2(points[:, 1], points[:, 0])[None, :] + rings[:, 2:3]
+    offset = hand.base_mm[None, :, :] - rings[:, None, :2]
+    phases = np.angle(np.exp(1j * (bearings - np.arctan2(offset[..., 1], offset[..., 0]))))
+    return np.where(phases.mean(axis=1) < 0.0, -1, 1)

@@ -9,15 +9,14 @@ from dataclasses import dataclass
 import numpy as np
 
 from control.grasping.grasp import Grasp
-from control.grasping.hold import FINGERS_APART_MM, LEFT_MM, Bench
+from control.grasping.hold import FINGERS_APART_MM, LEFT_MM, OPEN_MARGIN_MM, OPEN_MM, Bench
 from control.grasping.placing import place
 from control.model.kinematics import contact_centres, link_yaws
 from hw_profiles.geometry import Array, Pose2
 
 STEP_MM = 2.0  # between checked postures
 ORDERS = ((0.5, 0.4), (1.0, 0.0))  # the radius first, hugging the part; then both together
-PATH_MARGIN_MM = 1.0  # least cage margin on the way, where a cage is required
-STAND_OFFS_MM = (1.5, 3.0, 6.0, 10.0)  # tried in this order: the least opening that works
+STAND_OFFS_MM = (OPEN_MM, 3.0, 6.0, 10.0)  # tried in this order: the least opening that works
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -67,6 +66,25 @@ def transfer(
     return None
 
 
+def retreat(bench: Bench, start: Array, held: tuple[Grasp, Array], park: Array, part_pose: Pose2, speeds: Speeds) -> Path | None:
+    """Let go of the part and go back to the loose cage; None when no way is clear."""
+    for stand_off_mm, order in itertools.product(STAND_OFFS_MM, ORDERS):
+        postures, times = [start], [0.0]
+        opened = _shift(bench, *held, start, np.linspace(0.0, stand_off_mm, math.ceil(stand_off_mm) + 1))
+        if opened is None:
+            continue
+        _append(postures, times, opened, 2.0 * speeds.closing_mm_per_s, bench)
+        around = _around(bench, postures[-1], park, part_pose, stand_off_mm, order)
+        if around is None:
+            continue
+        n_held = len(postures)
+        _append(postures, times, [*around, park], speeds.free_mm_per_s, bench)
+        path = _checked(bench, postures, times, (n_held, len(postures)), part_pose, 0.3 * stand_off_mm)
+        if path is not None:
+            return path
+    return None
+
+
 def _try(
     bench: Bench,
     start: Array,
@@ -96,10 +114,19 @@ def _try(
     _append(postures, times, around, speeds.free_mm_per_s, bench)
     n_free = len(postures)
     _append(postures, times, closed, speeds.closing_mm_per_s, bench)
-    if not _is_clear(bench, postures, n_held, n_free, part_pose, 0.3 * stand_off_mm):
+    return _checked(bench, postures, times, (n_held, n_free), part_pose, 0.3 * stand_off_mm)
+
+
+def _checked(
+    bench: Bench, postures: list[Array], times: list[float], free: tuple[int, int], part_pose: Pose2, clear_mm: float
+) -> Path | None:
+    """The path, if it is clear and keeps the part caged as asked; the postures `free` [from, to) must not touch the part."""
+    if not _is_clear(bench, postures, *free, part_pose, clear_mm):
         return None
     margin_mm = min(bench.ring.certify(joints, part_pose.as_array()).margin_mm for joints in postures)
-    return Path(np.array(times), np.array(postures), margin_mm) if margin_mm >= min(bench.demands.margin_mm, PATH_MARGIN_MM) else None
+    if margin_mm < min(bench.demands.margin_mm, OPEN_MARGIN_MM):
+        return None
+    return Path(np.array(times), np.array(postures), margin_mm)
 
 
 def _shift(bench: Bench, grasp: Grasp, ring: Array, near: Array, clearances_mm: Array) -> list[Array] | None:

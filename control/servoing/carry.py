@@ -17,7 +17,7 @@ import numpy as np
 from hw_profiles.geometry import Array
 
 ROLL = np.array([1.0, 1.0, 1.25])  # part motion per ring motion: x, y, angle
-LEARN_S = 0.30  # time constant of the offset
+LEARN_S = 0.16  # time constant of the offset
 SERVO_LAG_S = 0.05  # from a command to the part having followed it
 TRAIL_S = 0.6  # how long commanded rings are remembered
 OFFSET_LIMIT = np.array([14.0, 14.0, math.radians(35.0)])  # about the offset at grasping

@@ -20,9 +20,10 @@ REQUIRED_MARGIN_MM = 2.0  # what the commanded posture must show, so that the re
 class Limits:
     """When the loop waits, gives up or faults.
 
-    stale_ms : age of the newest frame beyond which no pulses go out. lost_s : how long the part may be unseen while a goal is under
-    way. silent_ms : how long a board with telemetry may be silent. wake_ms : how long after arming the board is not yet judged. settle_s : wait after the fingers closed or a stroke ended.
-    max_regrasps_per_turn : grasps anew for one revolution before the loop says that it makes no progress.
+    stale_ms : age of the newest frame beyond which no pulses go out. lost_s : how long the part may be unseen while a goal is
+    under way. silent_ms : how long a board with telemetry may be silent. wake_ms : how long after arming the board is not yet
+    judged. settle_s : wait after the fingers closed or a stroke ended. max_regrasps_per_turn : grasps anew for one revolution
+    before the loop says that it makes no progress.
     """
 
     stale_ms: float = 150.0

@@ -8,7 +8,7 @@ from dataclasses import replace
 import numpy as np
 
 from control.grasping.library import Option
-from control.grasping.transfer import transfer
+from control.grasping.transfer import retreat, transfer
 from control.servoing import course
 from control.servoing.blend import blend_weights
 from control.servoing.carry import Carry, slewed
@@ -57,12 +57,10 @@ def advance(controller: Controller, memory: Memory, observation: Observation | N
 
 def _seek(controller: Controller, memory: Memory, seek: Seek, sight: Sight) -> Memory:
     """Try the next option: one a tick, for a search of the way costs milliseconds."""
-    if not seek.options or memory.task is None or memory.joints is None:
-        return replace(
-            memory,
-            motion=seek.held if seek.held is not None else Still(),
-            why="no clear way into a grasp from here; trying again",
-        )
+    if memory.task is None or memory.joints is None:
+        return replace(memory, motion=halted(seek.held or seek))
+    if not seek.options:
+        return _back_off(controller, memory, seek, sight)
     option = seek.options[0]
     library = controller.library
     held = None if seek.held is None else (library.reaches[seek.held.reach_index].grasp, seek.held.ring)
@@ -79,6 +77,19 @@ def _seek(controller: Controller, memory: Memory, seek: Seek, sight: Sight) -> M
         return replace(memory, motion=Seek(seek.options[1:], seek.held))
     task = replace(memory.task, n_regrasps=memory.task.n_regrasps + 1)
     return replace(memory, motion=Follow(path, memory.now_us, option), task=task, weights=())
+
+
+def _back_off(controller: Controller, memory: Memory, seek: Seek, sight: Sight) -> Memory:
+    """No way into a grasp from here: back to the loose cage, to try from there."""
+    why = "no clear way into another grasp from here; backing off to the loose cage"
+    if seek.held is None or memory.joints is None:
+        return replace(memory, motion=Still(), why=why)
+    library = controller.library
+    held = (library.reaches[seek.held.reach_index].grasp, seek.held.ring)
+    part_pose = Pose2.from_array(sight.measured)
+    path = retreat(library.bench, memory.joints, held, library.park, part_pose, controller.speeds)
+    motion: Motion = seek.held if path is None else Follow(path, memory.now_us, None)
+    return replace(memory, motion=motion, weights=(), why=why)
 
 
 def _follow(controller: Controller, memory: Memory, follow: Follow) -> Memory:
