@@ -14,7 +14,7 @@ from control.grasping.primitives import Primitives, primitives_of
 from control.grasping.reach import PITCH, Node, Reach, flood
 from control.grasping.roadmap import Roadmap
 from control.grasping.templates import ranked_at
-from control.grasping.transfer import Speeds, transfer
+from control.grasping.transfer import WAYS, Speeds, transfer
 from control.model.contact import PartShape
 from control.model.kinematics import HandModel
 from hw_profiles.geometry import Array, Pose2
@@ -142,7 +142,8 @@ def _reaches_at(bench: Bench, park: Array, yaw_rad: float, n: int) -> list[Reach
     found: list[Reach] = []
     covered = None
     for grasp in ranked_at(bench, yaw_rad)[:N_TRIED]:
-        if transfer(bench, park, None, (grasp, centre), Pose2(0.0, 0.0, yaw_rad), 1.0, Speeds()) is None:
+        pose = Pose2(0.0, 0.0, yaw_rad)
+        if not any(transfer(bench, park, None, (grasp, centre), pose, 1.0, Speeds(), way) for way in WAYS):
             continue
         reach = flood(bench, grasp, centre)
         held = reach.held_cells()

@@ -75,6 +75,18 @@ class Reach:
     def _held(self) -> NDArray[np.bool_]:
         return self.held_cells()
 
+    def held_cell_near(self, pose: Array) -> Node:
+        """The cell that holds a pose (3,), or the nearest one around it that can be held."""
+        cell = np.array(self.cell(pose))
+        around = cell + np.array(list(itertools.product((0, -1, 1), repeat=3)))
+        inside = around[((around >= 0) & (around < self._held.shape)).all(axis=1)]
+        held = inside[self._held[inside[:, 0], inside[:, 1], inside[:, 2]]]
+        if not len(held):
+            return (int(cell[0]), int(cell[1]), int(cell[2]))
+        place = (pose - self.origin) / PITCH - 0.5
+        i, j, k = held[int(np.argmin(np.abs(held - place).max(axis=1)))]
+        return int(i), int(j), int(k)
+
     def yaw_near(self, yaw_rad: float) -> float:
         """The same direction, unwrapped to lie within half a turn of the lattice's middle."""
         middle = self.origin[2] + PITCH[2] * (self.margin_mm.shape[2] - 1) / 2.0

@@ -16,7 +16,11 @@ from hw_profiles.geometry import Array, Pose2
 
 STEP_MM = 2.0  # between checked postures
 ORDERS = ((0.5, 0.4), (1.0, 0.0))  # the radius first, hugging the part; then both together
-STAND_OFFS_MM = (OPEN_MM, 3.0, 6.0, 10.0)  # tried in this order: the least opening that works
+STAND_OFFS_MM = (OPEN_MM, 5.0)  # tried in this order: the least opening that works
+ORDERS = ((0.5, 0.4), (1.0, 0.0))  # the radius first, hugging the part; then both together
+
+Way = tuple[float, tuple[float, float]]
+WAYS: tuple[Way, ...] = tuple(itertools.product(STAND_OFFS_MM, ORDERS))
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -53,49 +57,14 @@ def transfer(
     part_pose: Pose2,
     squeeze_mm: float,
     speeds: Speeds,
+    way: Way,
 ) -> Path | None:
-    """From the commanded posture `start` to `wanted` (grasp and its ring pose (3,)), pressed; None when no way is clear.
+    """From the commanded posture `start` to `wanted` (grasp and its ring pose (3,)), pressed; None when this way is not clear.
 
     `held` is what the fingers hold now: they open along its normals first. The part is taken to lie still at `part_pose`. Every
-    posture clears the part and the other fingers, and shows the bench's cage margin.
+    posture clears the part and the other fingers, and shows the bench's cage margin. Takes 5 to 10 ms.
     """
-    for stand_off_mm, order in itertools.product(STAND_OFFS_MM, ORDERS):
-        path = _try(bench, start, held, wanted, part_pose, squeeze_mm, speeds, stand_off_mm, order)
-        if path is not None:
-            return path
-    return None
-
-
-def retreat(bench: Bench, start: Array, held: tuple[Grasp, Array], park: Array, part_pose: Pose2, speeds: Speeds) -> Path | None:
-    """Let go of the part and go back to the loose cage; None when no way is clear."""
-    for stand_off_mm, order in itertools.product(STAND_OFFS_MM, ORDERS):
-        postures, times = [start], [0.0]
-        opened = _shift(bench, *held, start, np.linspace(0.0, stand_off_mm, math.ceil(stand_off_mm) + 1))
-        if opened is None:
-            continue
-        _append(postures, times, opened, 2.0 * speeds.closing_mm_per_s, bench)
-        around = _around(bench, postures[-1], park, part_pose, stand_off_mm, order)
-        if around is None:
-            continue
-        n_held = len(postures)
-        _append(postures, times, [*around, park], speeds.free_mm_per_s, bench)
-        path = _checked(bench, postures, times, (n_held, len(postures)), part_pose, 0.3 * stand_off_mm)
-        if path is not None:
-            return path
-    return None
-
-
-def _try(
-    bench: Bench,
-    start: Array,
-    held: tuple[Grasp, Array] | None,
-    wanted: tuple[Grasp, Array],
-    part_pose: Pose2,
-    squeeze_mm: float,
-    speeds: Speeds,
-    stand_off_mm: float,
-    order: tuple[float, float],
-) -> Path | None:
+    stand_off_mm, order = way
     postures, times = [start], [0.0]
     if held is not None:
         opened = _shift(bench, *held, start, np.linspace(0.0, stand_off_mm, math.ceil(stand_off_mm) + 1))
@@ -115,6 +84,25 @@ def _try(
     n_free = len(postures)
     _append(postures, times, closed, speeds.closing_mm_per_s, bench)
     return _checked(bench, postures, times, (n_held, n_free), part_pose, 0.3 * stand_off_mm)
+
+
+def retreat(bench: Bench, start: Array, held: tuple[Grasp, Array], park: Array, part_pose: Pose2, speeds: Speeds) -> Path | None:
+    """Let go of the part and go back to the loose cage; None when no way is clear."""
+    for stand_off_mm, order in WAYS:
+        postures, times = [start], [0.0]
+        opened = _shift(bench, *held, start, np.linspace(0.0, stand_off_mm, math.ceil(stand_off_mm) + 1))
+        if opened is None:
+            continue
+        _append(postures, times, opened, 2.0 * speeds.closing_mm_per_s, bench)
+        around = _around(bench, postures[-1], park, part_pose, stand_off_mm, order)
+        if around is None:
+            continue
+        n_held = len(postures)
+        _append(postures, times, [*around, park], speeds.free_mm_per_s, bench)
+        path = _checked(bench, postures, times, (n_held, len(postures)), part_pose, 0.3 * stand_off_mm)
+        if path is not None:
+            return path
+    return None
 
 
 def _checked(

@@ -14,20 +14,22 @@ from control.servoing.carry import ROLL, Carry
 from control.servoing.memory import Task
 from hw_profiles.geometry import Array, Pose2
 
-N_SAMPLES = 24  # of a straight way through a reach
+SAMPLES_PER_CELL = 6  # on a straight way through a reach
+N_STEPS = 96  # of the search for its end
 CENTRE_MM = 10.0  # strokes of a long turn are made this near to the palm centre
 WORTH_S = 0.3  # a regrasp must bring the goal nearer by this beyond its own cost
 
 
 def way_is_held(reach: Reach, start: Array, end: Array) -> bool:
     """Whether the grasp can hold all along the straight way between two ring poses (3,)."""
-    return reach.holds_all(start + np.linspace(0.0, 1.0, N_SAMPLES)[:, None] * (end - start))
+    n_samples = 4 + int(np.abs((end - start) / PITCH).max() * SAMPLES_PER_CELL)
+    return reach.holds_all(start + np.linspace(0.0, 1.0, n_samples)[:, None] * (end - start))
 
 
 def farthest_held(reach: Reach, start: Array, end: Array) -> Array:
     """The last ring pose (3,) on the straight way from `start` that can still be held."""
     last = start
-    for s in np.linspace(0.0, 1.0, 4 * N_SAMPLES):
+    for s in np.linspace(0.0, 1.0, N_STEPS):
         point = start + s * (end - start)
         if not reach.holds(point):
             break

@@ -24,10 +24,11 @@ class Still:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Seek:
-    """Looking for a clear way into one of these grasps, one option a tick, the most promising first."""
+    """Looking for a clear way into one of these grasps, one way a tick, the most promising grasp first."""
 
     options: tuple[Option, ...]
     held: Carry | None
+    n_tried: int = 0
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -90,6 +91,7 @@ class Task:
     target : (3,) where the part shall be, yaw unwrapped; nan where the goal leaves it free.
     guide : (3,) the same with the free coordinates kept where they were at the start.
     remaining : time to the target from everywhere, where the part's angle and the grasp's belong together.
+    blocked : cells of the roadmap at which no change of grasp worked out.
     within_since_us : since when the part has been within tolerance. n_regrasps : to notice a lack of progress.
     """
 
@@ -98,6 +100,7 @@ class Task:
     target: Array
     guide: Array
     remaining: Remaining | None = None
+    blocked: frozenset[int] = frozenset()
     within_since_us: int | None = None
     n_regrasps: int = 0
 

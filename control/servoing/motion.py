@@ -8,7 +8,7 @@ from dataclasses import replace
 import numpy as np
 
 from control.grasping.library import Option
-from control.grasping.transfer import retreat, transfer
+from control.grasping.transfer import WAYS, retreat, transfer
 from control.servoing import course
 from control.servoing.blend import blend_weights
 from control.servoing.carry import Carry, slewed
@@ -56,12 +56,12 @@ def advance(controller: Controller, memory: Memory, observation: Observation | N
 
 
 def _seek(controller: Controller, memory: Memory, seek: Seek, sight: Sight) -> Memory:
-    """Try the next option: one a tick, for a search of the way costs milliseconds."""
+    """Try the next way: one a tick, for it costs milliseconds."""
     if memory.task is None or memory.joints is None:
         return replace(memory, motion=halted(seek.held or seek))
-    if not seek.options:
-        return _back_off(controller, memory, seek, sight)
-    option = seek.options[0]
+    if seek.n_tried >= len(WAYS) * len(seek.options):
+        return _nowhere(controller, memory, memory.task, seek, sight)
+    option = seek.options[seek.n_tried // len(WAYS)]
     library = controller.library
     held = None if seek.held is None else (library.reaches[seek.held.reach_index].grasp, seek.held.ring)
     path = transfer(
@@ -72,24 +72,30 @@ def _seek(controller: Controller, memory: Memory, seek: Seek, sight: Sight) -> M
         Pose2.from_array(sight.measured),
         controller.rig.motion.squeeze_mm,
         controller.speeds,
+        WAYS[seek.n_tried % len(WAYS)],
     )
     if path is None:
-        return replace(memory, motion=Seek(seek.options[1:], seek.held))
+        return replace(memory, motion=replace(seek, n_tried=seek.n_tried + 1))
     task = replace(memory.task, n_regrasps=memory.task.n_regrasps + 1)
     return replace(memory, motion=Follow(path, memory.now_us, option), task=task, weights=())
 
 
-def _back_off(controller: Controller, memory: Memory, seek: Seek, sight: Sight) -> Memory:
-    """No way into a grasp from here: back to the loose cage, to try from there."""
-    why = "no clear way into another grasp from here; backing off to the loose cage"
-    if seek.held is None or memory.joints is None:
-        return replace(memory, motion=Still(), why=why)
+def _nowhere(controller: Controller, memory: Memory, task: Task, seek: Seek, sight: Sight) -> Memory:
+    """No way into another grasp from here: carry the part on to where there may be one, or go back to the loose cage."""
     library = controller.library
-    held = (library.reaches[seek.held.reach_index].grasp, seek.held.ring)
-    part_pose = Pose2.from_array(sight.measured)
-    path = retreat(library.bench, memory.joints, held, library.park, part_pose, controller.speeds)
+    if seek.held is None or memory.joints is None:
+        return replace(memory, motion=Still(), why="no clear way into a grasp from here; trying again")
+    reach = library.reaches[seek.held.reach_index]
+    if library.roadmap is not None:
+        blocked = task.blocked | library.roadmap.cells_about(seek.held.reach_index, reach.cell(seek.held.ring))
+        remaining = library.roadmap.remaining(task.guide, blocked)
+        if remaining.at(seek.held.reach_index, reach.cell(seek.held.ring)) < math.inf:
+            return replace(memory, motion=seek.held, task=replace(task, blocked=blocked, remaining=remaining))
+    path = retreat(
+        library.bench, memory.joints, (reach.grasp, seek.held.ring), library.park, Pose2.from_array(sight.measured), controller.speeds
+    )
     motion: Motion = seek.held if path is None else Follow(path, memory.now_us, None)
-    return replace(memory, motion=motion, weights=(), why=why)
+    return replace(memory, motion=motion, weights=(), why="no clear way into another grasp from here; backing off to the loose cage")
 
 
 def _follow(controller: Controller, memory: Memory, follow: Follow) -> Memory:
@@ -115,9 +121,6 @@ def _carry(controller: Controller, memory: Memory, carry: Carry, sight: Sight, e
         if not is_final and np.all(np.abs(wanted - carry.ring) < ARRIVED):
             return _regrasp(controller, memory, carry, sight, task)
     ring = slewed(carry.ring, wanted, controller.tip_speed_mm_per_s, controller.turn_speed_rad_per_s, elapsed_s)
-    reach = library.reaches[carry.reach_index]
-    if not reach.holds(ring):
-        ring = carry.ring
     posture = _blended(controller, memory, carry.reach_index, ring)
     return replace(posture, motion=carry.steer(ring, memory.now_us))
 
@@ -136,7 +139,7 @@ def _blended(controller: Controller, memory: Memory, reach_index: int, ring: Arr
     reach = controller.library.reaches[reach_index]
     near = controller.hand.home if memory.joints is None else memory.joints
     wanted, _ = reach.grasp.joints(controller.hand, controller.library.bench.shape, ring, -controller.rig.motion.squeeze_mm, near)
-    primitives = controller.library.primitives(reach_index, reach.cell(ring))
+    primitives = controller.library.primitives(reach_index, reach.held_cell_near(ring))
     weights = blend_weights(primitives.joints, wanted, controller.joint_scale)
     used = tuple((primitives.names[k], float(weights[k])) for k in np.flatnonzero(weights > 1e-6))
     return replace(memory, joints=weights @ primitives.joints, weights=used)
@@ -154,7 +157,7 @@ def blend_by_hand(controller: Controller, memory: Memory, weights: tuple[tuple[s
     if not isinstance(carry, Carry) or (memory.task is not None and memory.joints is None):
         raise CommandError("blend: nothing is grasped; allowed: after a goal has closed the fingers on the part")
     reach = controller.library.reaches[carry.reach_index]
-    primitives = controller.library.primitives(carry.reach_index, reach.cell(carry.ring))
+    primitives = controller.library.primitives(carry.reach_index, reach.held_cell_near(carry.ring))
     values = np.zeros(len(primitives.names))
     for name, weight in weights:
         if name not in primitives.names:
