@@ -80,15 +80,23 @@ class LockstepBench:
         """Advance by frame periods until a frame arrives; raises DeviceTimeout when none does in time."""
         waited_us = 0
         while waited_us < timeout_s * 1e6:
-            self._advance(self._period_us)
+            self.advance(self._period_us)
             waited_us += self._period_us
-            if self._chance.random() >= self.variation.dropout:
-                captured_at_us, pose, joints = self._past[0]
-                pixels = self._renderer.render(pose, joints, noise=self.variation.noise, occlusion=self.variation.occlusion)
-                return Frame(captured_at_us, pixels)
+            frame = self.picture()
+            if frame is not None:
+                return frame
         raise DeviceTimeout(f"no frame within {timeout_s:g} s")
 
-    def _advance(self, duration_us: int) -> None:
+    def picture(self) -> Frame | None:
+        """The frame that arrives now, of the world one latency ago; None when it is one of those that are lost."""
+        if self._chance.random() < self.variation.dropout:
+            return None
+        captured_at_us, pose, joints = self._past[0]
+        pixels = self._renderer.render(pose, joints, noise=self.variation.noise, occlusion=self.variation.occlusion)
+        return Frame(captured_at_us, pixels)
+
+    def advance(self, duration_us: int) -> None:
+        """Let world and board go on; servos see new pulse widths at 50 Hz."""
         for _ in range(duration_us // STEP_US):
             if self.world.now_us % PULSE_PERIOD_US == 0:
                 self.world.set_pulses(self.board.pulses_us(self.world.now_us)[self._channels])

@@ -10,6 +10,7 @@ frame; what moves gets noise from a seeded bank read at a random place.
 from __future__ import annotations
 
 import math
+from functools import lru_cache
 
 import cv2
 import numpy as np
@@ -31,6 +32,7 @@ LIGHT = np.array([-0.35, 0.45, 0.82])  # toward the lamp, hand frame
 GREY = np.array([0.114, 0.587, 0.299])  # luma weights of blue, green, red (ITU-R BT.601)
 SHADOW_PER_MM = np.array([0.30, -0.38])  # how far a shadow falls beside its owner, per mm of height
 N_PLATES = 6
+GRAIN_SHIFT = 99_991
 BANK = 1 << 16
 MAX_SUBFRAMES = 24
 
@@ -90,18 +92,19 @@ class Renderer:
             return
         self._noise_sd = noise_sd
         self._bank = np.clip(np.round(self._unit_noise * noise_sd), -127, 127).astype(np.int8)
-        shape = (*self._plate.shape[:2], self._n_channels)
         plate = self._plate if self._n_channels == 3 else (self._plate @ GREY.astype(np.float32))[..., None]
-        grain = np.random.default_rng(11)  # the same for every seed: the plates only have to differ from each other
+        grain = _grain(plate.size)
         self._noisy_plates = []
-        for _ in range(N_PLATES):
-            noisy = plate + noise_sd * grain.standard_normal(shape, dtype=np.float32)
-            self._noisy_plates.append(np.clip(np.round(noisy), 0, 255).astype(np.uint8))
+        for index in range(N_PLATES):
+            noise = grain[index * GRAIN_SHIFT : index * GRAIN_SHIFT + plate.size].reshape(plate.shape)
+            noisy = plate + np.float32(noise_sd) * noise + np.float32(0.5)
+            self._noisy_plates.append(np.clip(noisy, 0, 255, out=noisy).astype(np.uint8))
 
     def _plane_map(self, z_mm: float) -> NDArray[np.float32]:
         """Where on the plane z = z_mm each pixel looks (height, width, 2) [mm]."""
-        v, u = np.mgrid[: self.camera.height_px, : self.camera.width_px].astype(float)
-        return self._model.plane_points(np.stack([u, v], axis=-1), z_mm).astype(np.float32)
+        plane_from_pinhole = np.linalg.inv(self._model.pinhole_from_plane(z_mm))
+        mapped = _pinhole_map(self.camera) @ plane_from_pinhole[:, :2].T + plane_from_pinhole[:, 2]
+        return np.asarray(mapped[..., :2] / mapped[..., 2:], dtype=np.float32)
 
     def _as_pixels(self, image: NDArray[np.float32]) -> Pixels:
         if self._n_channels == 1:
@@ -200,6 +203,19 @@ class Renderer:
         n = int(np.clip(math.ceil(2.0 * travel * self._scale), 1, MAX_SUBFRAMES))
         times = ((np.arange(n) + 0.5) / n - 0.5) * exposure_s
         return np.asarray(pose.as_array() + times[:, None] * twist)
+
+
+@lru_cache(maxsize=2)
+def _pinhole_map(camera: Camera) -> Array:
+    """Ideal pinhole coordinates (height, width, 2) of every pixel."""
+    v, u = np.mgrid[: camera.height_px, : camera.width_px].astype(float)
+    return model_of(camera).undistort(np.stack([u, v], axis=-1))
+
+
+@lru_cache(maxsize=2)
+def _grain(size: int) -> NDArray[np.float32]:
+    """Unit noise that the plates read from different places of; the same for every seed, the plates only have to differ."""
+    return np.random.default_rng(11).standard_normal(size + N_PLATES * GRAIN_SHIFT, dtype=np.float32)
 
 
 @njit(cache=True)
@@ -307,12 +323,16 @@ def _draw_capsules(
 ) -> None:
     """Round bars lit from one side, edges as soft as the lens makes them."""
     height, width, n_channels = canvas.shape
+    colours = np.empty(3, np.int64)
     for k in range(capsules.shape[0]):
         ax, ay, radius = capsules[k, 0], capsules[k, 1], capsules[k, 4]
         ex, ey = capsules[k, 2] - ax, capsules[k, 3] - ay
         per_length_sq = 0.0 if ex == 0.0 and ey == 0.0 else 1.0 / (ex * ex + ey * ey)
         outer_sq, inner_sq = (radius + 0.5 * soft_mm) ** 2, max(radius - 0.5 * soft_mm, 0.0) ** 2
-        per_radius, per_soft = 1.0 / radius, 1.0 / soft_mm
+        per_radius_sq, per_soft = 1.0 / (radius * radius), 1.0 / soft_mm
+        flank_x, flank_y = 0.43 * light[0] / radius, 0.43 * light[1] / radius
+        for c in range(3):
+            colours[c] = int(capsules[k, 5 + c])
         first = max(int(min(bars[k, 1], bars[k, 3]) - bars[k, 4]), 0)
         last = min(int(max(bars[k, 1], bars[k, 3]) + bars[k, 4]) + 2, height)
         for v in range(first, last):
@@ -325,17 +345,16 @@ def _draw_capsules(
                 distance_sq = dx * dx + dy * dy
                 if distance_sq > outer_sq:
                     continue
-                flank = (dx * light[0] + dy * light[1]) * per_radius
-                rise = max(1.0 - distance_sq * per_radius * per_radius, 0.0)  # squared height of the round bar, of its radius
-                shade = 0.55 + 0.43 * flank + 0.62 * light[2] * rise * (1.6 - 0.6 * rise)
+                rise = max(1.0 - distance_sq * per_radius_sq, 0.0)  # squared height of the round bar, of its radius
+                shade = int(256.0 * (0.55 + dx * flank_x + dy * flank_y + 0.62 * light[2] * rise * (1.6 - 0.6 * rise)))
                 weight = 256
                 if distance_sq > inner_sq:
                     cover = 0.5 + (radius - math.sqrt(distance_sq)) * per_soft
                     weight = int(256.0 * cover * cover * (3.0 - 2.0 * cover))
                 for c in range(n_channels):
-                    grain = bank[(place + n_channels * u + c) & (BANK - 1)]
-                    colour = int(min(max(capsules[k, 5 + c] * shade + grain, 0.0), 255.0))
-                    canvas[v, u, c] = (canvas[v, u, c] * (256 - weight) + colour * weight + 128) >> 8
+                    colour = ((colours[c] * shade) >> 8) + bank[(place + n_channels * u + c) & (BANK - 1)]
+                    value = (canvas[v, u, c] * (256 - weight) + colour * weight + 128) >> 8
+                    canvas[v, u, c] = np.uint8(min(max(value, 0), 255))
 
 
 @njit(cache=True)

@@ -1,0 +1,18 @@
+"""Child processes that never outlive their parent."""
+
+from __future__ import annotations
+
+import ctypes
+import os
+import signal
+
+PR_SET_PDEATHSIG = 1  # linux/prctl.h
+
+
+def die_with_parent() -> None:
+    """Ask the kernel to kill this process when its parent dies; leave at once if that has happened already."""
+    parent = os.getppid()
+    ctypes.CDLL(None, use_errno=True).prctl(PR_SET_PDEATHSIG, signal.SIGKILL)
+    if os.getppid() != parent or parent == 1:
+        os._exit(1)
+    signal.signal(signal.SIGINT, signal.SIG_IGN)  # Ctrl-C is the parent's; it ends its children in order
