@@ -125,12 +125,13 @@ def touches(hand: HandArrays, lines_mm: Array, pose: Array, outline_mm: Array, d
             x, y = lines_mm[f, k, 0] - pose[0], lines_mm[f, k, 1] - pose[1]
             local[k, 0], local[k, 1] = cos * x + sin * y, -sin * x + cos * y
         for k in range(n_links):
-            _nearest_on_link(local[k], local[k + 1], hand.link_radius_mm[hand.first[f] + k], outline_mm, disc_mm, touch[f])
-        _nearest_on_link(local[n_links], local[n_links], hand.tip_radius_mm[f], outline_mm, disc_mm, touch[f])
+            link_touch(local[k], local[k + 1], hand.link_radius_mm[hand.first[f] + k], outline_mm, disc_mm, touch[f])
+        link_touch(local[n_links], local[n_links], hand.tip_radius_mm[f], outline_mm, disc_mm, touch[f])
 
 
 @njit(cache=True)
-def _nearest_on_link(a: Array, b: Array, radius_mm: float, outline_mm: Array, disc_mm: float, touch: Array) -> None:
+def link_touch(a: Array, b: Array, radius_mm: float, outline_mm: Array, disc_mm: float, touch: Array) -> None:
+    """Where one link with centre line a–b (in the part frame) is nearest to the part, if nearer than `touch` says; see `touches`."""
     if disc_mm > 0.0:
         x, y = _toward(0.0, 0.0, a, b)
         distance = math.hypot(x, y)

@@ -61,6 +61,7 @@ class Energy:
 
     def __init__(self, hand: HandModel, part: Part) -> None:
         self.hand = hand
+        self.part = part
         self.pieces = pieces_of(part)
         self.reach_mm = part.circumradius_mm
 
