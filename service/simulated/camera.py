@@ -142,7 +142,7 @@ class Renderer:
     def _bars(self, capsules: Array, z_mm: float, outer_mm: Array, shift_mm: Array | float = 0.0) -> Array:
         """Where the image shows capsules of the plane z_mm: (n, 5) ends ua, va, ub, vb and a safe half width [px]."""
         ends = self._model.project_plane(capsules[:, :4].reshape(-1, 2, 2) + shift_mm, z_mm)
-        return np.concatenate([ends.reshape(-1, 4), (outer_mm * self._scale * 1.15 + 2.0)[:, None]], axis=1)
+        return np.concatenate([ends.reshape(-1, 4), (outer_mm * self._scale * 1.12 + 1.0)[:, None]], axis=1)
 
     def _draw_bars(self, canvas: Pixels, capsules: Array, start: int) -> None:
         soft_mm = 1.6 / self._scale
@@ -298,16 +298,28 @@ def _draw_shaded(
 
 @njit(cache=True)
 def _row_span(bar: Array, v: int, width: int) -> tuple[int, int]:
-    """Columns (first, last plus one) of row v within reach of the segment bar = (ua, va, ub, vb, reach)."""
-    ua, va, ub, vb, reach = bar[0], bar[1], bar[2], bar[3], bar[4]
-    t_low, t_high = 0.0, 1.0
+    """Columns (first, last plus one) of row v that the capsule bar = (ua, va, ub, vb, radius) covers.
+
+    A capsule is convex, so the row's ends lie on its round ends or on the two straight lines between them.
+    """
+    ua, va, ub, vb, radius = bar[0], bar[1], bar[2], bar[3], bar[4]
+    low, high = math.inf, -math.inf
+    for k in range(2):
+        u_end, dv = (ua, v - va) if k == 0 else (ub, v - vb)
+        if abs(dv) <= radius:
+            half = math.sqrt(radius * radius - dv * dv)
+            low, high = min(low, u_end - half), max(high, u_end + half)
+    length = math.hypot(ub - ua, vb - va)
     if abs(vb - va) > 1e-9:
-        t_1, t_2 = (v - reach - va) / (vb - va), (v + reach - va) / (vb - va)
-        t_low, t_high = max(0.0, min(t_1, t_2)), min(1.0, max(t_1, t_2))
-        if t_low > t_high:
-            return 0, 0
-    u_1, u_2 = ua + t_low * (ub - ua), ua + t_high * (ub - ua)
-    return max(int(min(u_1, u_2) - reach), 0), min(int(max(u_1, u_2) + reach) + 2, width)
+        side_u, side_v = -(vb - va) / length * radius, (ub - ua) / length * radius
+        for sign in (-1.0, 1.0):
+            t = (v - va - sign * side_v) / (vb - va)
+            if 0.0 <= t <= 1.0:
+                u = ua + sign * side_u + t * (ub - ua)
+                low, high = min(low, u), max(high, u)
+    if low > high:
+        return 0, 0
+    return max(math.floor(low), 0), min(math.ceil(high) + 1, width)
 
 
 @njit(cache=True)
