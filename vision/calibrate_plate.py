@@ -51,23 +51,10 @@ def solve_plate(
         Too few marks, marks on a line, a fit that leaves more than MAX_RMS_MM on the plate, or a camera that does not look down.
     """
     _refuse_bad_marks(marks_mm, marks_px)
-    model = model_of(camera)
-    start = _from_homography(marks_mm, model.undistort(marks_px), height_mm)
-
-    def misfit(unknowns: Array) -> Array:
-        return (_moved(model, unknowns, marks_mm, height_mm) - marks_px).ravel()
-
-    found = least_squares(misfit, start, x_scale=np.array([1.0, 1.0, 1.0, 400.0, 400.0, 400.0]), xtol=1e-12, ftol=1e-12)
-    mount = mount_of(Rotation.from_rotvec(found.x[:3]).as_matrix(), found.x[3:])
-    seen = model_of(camera.model_copy(update={"mount": mount})).plane_points(marks_px, height_mm)
-    residuals = np.linalg.norm(seen - marks_mm, axis=1)
-    rms = float(np.sqrt(np.mean(residuals**2)))
+    mount, residuals = _fit(marks_mm, marks_px, camera, height_mm)
+    rms = _rms(residuals)
     if rms > MAX_RMS_MM:
-        worst = int(np.argmax(residuals))
-        where = f"mark {worst + 1} at ({marks_mm[worst, 0]:.1f}, {marks_mm[worst, 1]:.1f}), {residuals[worst]:.2f} mm off"
-        advice = (
-            f"worst is {where}" if len(marks_mm) >= TELLING_MARKS else f"measure them again, or give {TELLING_MARKS} to see which is wrong"
-        )
+        advice = _advice(marks_mm, marks_px, camera, height_mm)
         raise CalibrationError(f"the marks miss their places by {rms:.2f} mm, allowed: {MAX_RMS_MM:g}; {advice}")
     return PlateCalibration(
         made_on=made_on.isoformat(),
@@ -80,6 +67,35 @@ def solve_plate(
         rms_mm=rms,
         residuals_mm=tuple(float(value) for value in residuals),
     )
+
+
+def _fit(marks_mm: Array, marks_px: Array, camera: Camera, height_mm: float) -> tuple[Mount, Array]:
+    """Mount, and distances (n,) [mm] on the plate between marks and where the camera sees them."""
+    model = model_of(camera)
+    start = _from_homography(marks_mm, model.undistort(marks_px), height_mm)
+
+    def misfit(unknowns: Array) -> Array:
+        return (_moved(model, unknowns, marks_mm, height_mm) - marks_px).ravel()
+
+    found = least_squares(misfit, start, x_scale=np.array([1.0, 1.0, 1.0, 400.0, 400.0, 400.0]), xtol=1e-12, ftol=1e-12)
+    mount = mount_of(Rotation.from_rotvec(found.x[:3]).as_matrix(), found.x[3:])
+    seen = model_of(camera.model_copy(update={"mount": mount})).plane_points(marks_px, height_mm)
+    return mount, np.linalg.norm(seen - marks_mm, axis=1)
+
+
+def _rms(residuals: Array) -> float:
+    return float(np.sqrt(np.mean(residuals**2)))
+
+
+def _advice(marks_mm: Array, marks_px: Array, camera: Camera, height_mm: float) -> str:
+    """Which mark is wrong: the one without which the rest fit best."""
+    if len(marks_mm) < TELLING_MARKS:
+        return f"measure them again, or give {TELLING_MARKS} to see which is wrong"
+    rest = [np.arange(len(marks_mm)) != index for index in range(len(marks_mm))]
+    left = [_rms(_fit(marks_mm[keep], marks_px[keep], camera, height_mm)[1]) for keep in rest]
+    worst = int(np.argmin(left))
+    where = f"({marks_mm[worst, 0]:.1f}, {marks_mm[worst, 1]:.1f})"
+    return f"without mark {worst + 1} at {where} it is {left[worst]:.2f} mm: measure that one again"
 
 
 def mount_of(turn: Array, shift_mm: Array) -> Mount:

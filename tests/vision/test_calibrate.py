@@ -159,7 +159,7 @@ def test_the_plate_is_found_from_a_board_lying_on_it() -> None:
         (MARKS[:3], 0.0, "needed: 4"),
         (np.array([[-90.0, 0.0], [-30.0, 1.0], [30.0, 0.0], [90.0, 1.0]]), 0.0, "almost on a line"),
         (MARKS, 6.0, "give 6 to see which is wrong"),
-        (np.array([*MARKS, *(0.5 * MARKS[::-1])]), 6.0, r"worst is mark 3 at \(96\.0, 66\.0\)"),
+        (np.array([*MARKS, *(0.5 * MARKS[::-1])]), 6.0, r"without mark 3 at \(96\.0, 66\.0\) it is 0\.00 mm"),
         (MARKS[[0, 3, 2, 1]], None, "right order"),
     ],
 )
