@@ -11,7 +11,7 @@ import typer
 from rich.console import Console
 
 from hw_profiles.errors import PalmloopError
-from service import commands_check, commands_trial
+from service import commands_check, commands_serve, commands_trial, commands_vision
 
 FELL_SHORT, REFUSED = 1, 2
 
@@ -24,6 +24,9 @@ app = typer.Typer(
 )
 app.command("check")(commands_check.check)
 app.command("trial")(commands_trial.trial)
+app.command("serve")(commands_serve.serve)
+app.command("track")(commands_vision.track)
+app.add_typer(commands_vision.calibrate, name="calibrate")
 
 
 def main() -> None:

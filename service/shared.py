@@ -20,9 +20,11 @@ class SharedBlock:
         self._memory = shared_memory.SharedMemory(name=name, create=self._is_owner, size=HEADER.size + size)
         if not self._is_owner:  # the owner takes it away; Python before 3.13 would have every reader do so at its exit
             resource_tracker.unregister(self._memory._name, "shared_memory")  # type: ignore[attr-defined]
+        assert self._memory.buf is not None
+        self._buffer: memoryview = self._memory.buf
         self._size = size
         if self._is_owner:
-            HEADER.pack_into(self._memory.buf, 0, 0, 0, 0)
+            HEADER.pack_into(self._buffer, 0, 0, 0, 0)
 
     @property
     def name(self) -> str:
@@ -33,25 +35,26 @@ class SharedBlock:
         """Replace the value; data beyond the block's size is refused."""
         if len(data) > self._size:
             raise ValueError(f"{len(data)} bytes do not fit the shared block of {self._size}")
-        version, _, _ = HEADER.unpack_from(self._memory.buf, 0)
-        HEADER.pack_into(self._memory.buf, 0, version + 1, len(data), stamp)
-        self._memory.buf[HEADER.size : HEADER.size + len(data)] = data
-        HEADER.pack_into(self._memory.buf, 0, version + 2, len(data), stamp)
+        version, _, _ = HEADER.unpack_from(self._buffer, 0)
+        HEADER.pack_into(self._buffer, 0, version + 1, len(data), stamp)
+        self._buffer[HEADER.size : HEADER.size + len(data)] = data
+        HEADER.pack_into(self._buffer, 0, version + 2, len(data), stamp)
 
     def read(self) -> tuple[int, int, bytes] | None:
         """Version, stamp and a copy of the value; None before the first, or while a writer is too busy."""
         for _ in range(100):
-            version, length, stamp = HEADER.unpack_from(self._memory.buf, 0)
+            version, length, stamp = HEADER.unpack_from(self._buffer, 0)
             if version == 0:
                 return None
             if version % 2 == 0 and length <= self._size:
-                data = bytes(self._memory.buf[HEADER.size : HEADER.size + length])
-                if HEADER.unpack_from(self._memory.buf, 0)[0] == version:
+                data = bytes(self._buffer[HEADER.size : HEADER.size + length])
+                if HEADER.unpack_from(self._buffer, 0)[0] == version:
                     return version, stamp, data
         return None
 
     def close(self) -> None:
         """Let it go; the owner takes it away for all."""
+        self._buffer.release()
         self._memory.close()
         if self._is_owner:
             self._memory.unlink()
@@ -59,7 +62,7 @@ class SharedBlock:
 
 def frame_bytes(frame: Frame) -> memoryview:
     """The pixels as one run of bytes."""
-    return memoryview(np.ascontiguousarray(frame.pixels)).cast("B")
+    return np.ascontiguousarray(frame.pixels).data.cast("B")
 
 
 def frame_from(data: bytes, shape: tuple[int, ...], captured_at_us: int) -> Frame:

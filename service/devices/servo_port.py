@@ -33,12 +33,12 @@ class SerialPort:
         self._fault: str | None = None
         self._is_closing = False
         self._wake = threading.Condition()
-        self._threads = [threading.Thread(target=work, name=f"serial {name}", daemon=True) for name, work in self._works()]
+        self._threads = [
+            threading.Thread(target=self._write_on, name="serial write", daemon=True),
+            threading.Thread(target=self._read_on, name="serial read", daemon=True),
+        ]
         for thread in self._threads:
             thread.start()
-
-    def _works(self) -> list[tuple[str, object]]:
-        return [("write", self._write_on), ("read", self._read_on)]
 
     def write(self, data: bytes) -> None:
         """Hand bytes over for sending; the oldest waiting message gives way when too many wait."""
