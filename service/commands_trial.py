@@ -13,11 +13,16 @@ from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, T
 
 from hw_profiles import load
 from hw_profiles.errors import DeviceError, Problem, ProfileError
+from hw_profiles.rig import Rig
+from service.picture import annotated
 from service.rig import simulated_stage
 from service.simulated.variation import Variation
+from service.snapshot import report_json
 from service.trials import figures
+from service.trials.report import report_html
 from service.trials.run import Result, Stage, TrialRun, run_trial
 from service.trials.spec import TrialSpec
+from vision.frames import Pixels
 
 
 def trial(
@@ -32,7 +37,7 @@ def trial(
     timeout_s: Annotated[float, typer.Option(help="time allowed for a goal")] = 20.0,
     vary: Annotated[list[str] | None, typer.Option(help="NAME=VALUE: what the world does unlike its profile")] = None,
     seed: Annotated[int, typer.Option(help="of the goals and the simulated world")] = 0,
-    out: Annotated[Path | None, typer.Option(help="folder for results.json")] = None,
+    out: Annotated[Path | None, typer.Option(help="folder for report.html and results.json")] = None,
     as_json: Annotated[bool, typer.Option("--json", help="one JSON object on stdout")] = False,
 ) -> None:
     """Bring the part to one goal after another and measure."""
@@ -53,12 +58,24 @@ def trial(
     if out is not None:
         out.mkdir(parents=True, exist_ok=True)
         (out / "results.json").write_text(json.dumps({"figures": found, "goals": figures.per_goal(run)}, indent=1))
+        (out / "report.html").write_text(report_html(loaded, run, found, _last_picture(stage, loaded)), encoding="utf-8")
     if as_json:
         print(json.dumps(found))
     else:
         figures.print_summary(console, found, run)
+        if out is not None:
+            console.print(f"  report: {out / 'report.html'}")
     if found["reached"] < found["goals"]:
         raise typer.Exit(1)
+
+
+def _last_picture(stage: Stage, rig: Rig) -> Pixels | None:
+    """The newest frame with what the loop last believed, before it was disarmed."""
+    loop = stage.loop
+    if loop.last_frame is None or stage.last_report is None:
+        return None
+    shown = report_json(stage.last_report, None, loop.clock.now_us())
+    return annotated(loop.last_frame.pixels, rig, loop.controller.hand, shown)
 
 
 def _spec(**options: object) -> TrialSpec:

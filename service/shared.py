@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import struct
-from multiprocessing import resource_tracker, shared_memory
+from multiprocessing import shared_memory
 
 import numpy as np
 
@@ -18,8 +18,6 @@ class SharedBlock:
     def __init__(self, size: int, name: str | None = None) -> None:
         self._is_owner = name is None
         self._memory = shared_memory.SharedMemory(name=name, create=self._is_owner, size=HEADER.size + size)
-        if not self._is_owner:  # the owner takes it away; Python before 3.13 would have every reader do so at its exit
-            resource_tracker.unregister(self._memory._name, "shared_memory")  # type: ignore[attr-defined]
         assert self._memory.buf is not None
         self._buffer: memoryview = self._memory.buf
         self._size = size

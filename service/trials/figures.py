@@ -84,8 +84,8 @@ def _pose(pose: Pose2) -> dict[str, float]:
 def print_summary(console: Console, figures: dict[str, Any], run: TrialRun) -> None:
     """The result as a table that a person reads."""
     is_whole = figures["reached"] == figures["goals"]
-    title = f"{figures['part']} in {figures['rig']}, {figures['kind']} goals, seed {figures['seed']}"
-    table = Table(title=title, title_justify="left", show_header=True, header_style="bold")
+    console.print(f"[bold]{figures['part']}[/] in {figures['rig']}, {figures['kind']} goals, seed {figures['seed']}")
+    table = Table(header_style="bold")
     table.add_column("")
     table.add_column("median", justify="right")
     table.add_column("95 %", justify="right")

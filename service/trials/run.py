@@ -73,6 +73,7 @@ class Stage:
     truth: Callable[[], Pose2] | None
     has_escaped: Callable[[], bool]
     restart: Callable[[], None]
+    last_report: Report | None = None  # of the goal that was worked on last
 
 
 def run_trial(stage: Stage, spec: TrialSpec, progress: Callable[[Result], None] = lambda _: None) -> TrialRun:
@@ -148,6 +149,7 @@ def _pursue(stage: Stage, goal: Goal, counter: Counter) -> Result:
     while outcome is None:
         report = loop.step(requests)
         requests = ()
+        stage.last_report = report
         counter.see(report)
         turned.see(_where(stage))
         n_before = loop.memory.task.n_regrasps if loop.memory.task is not None else n_before
