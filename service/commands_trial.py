@@ -47,7 +47,9 @@ def trial(
     loaded = load.load_rig(rig, part)
     variation = Variation.parse(vary or [])
     if not simulated:
-        raise DeviceError(f"rig '{loaded.name}': only --simulated trials are possible yet")
+        missing = [key for key in ("serial_device", "camera_device") if not getattr(loaded, key)]
+        lacks = f"{' and '.join(missing)} not set; fill in the profile, or" if missing else "not opened yet by trial;"
+        raise DeviceError(f"rig '{loaded.name}': {lacks} run it with --simulated")
     console = Console(stderr=as_json, highlight=False)
     stage = simulated_stage(loaded, variation, seed)
     try:
