@@ -16,3 +16,12 @@ def die_with_parent() -> None:
     if os.getppid() != parent or parent == 1:
         os._exit(1)
     signal.signal(signal.SIGINT, signal.SIG_IGN)  # Ctrl-C is the parent's; it ends its children in order
+
+
+def ask_for_priority(priority: int) -> str:
+    """Ask for real-time scheduling, so that a busy machine does not delay the loop; says what came of it."""
+    try:
+        os.sched_setscheduler(0, os.SCHED_FIFO, os.sched_param(priority))
+    except OSError:
+        return "normal (SCHED_FIFO was not granted: expect more jitter on a busy machine)"
+    return f"SCHED_FIFO {priority}"

@@ -5,7 +5,6 @@ from __future__ import annotations
 import contextlib
 import gc
 import json
-import os
 import signal
 import time
 from collections import OrderedDict
@@ -21,7 +20,7 @@ from control.servoing.goals import Goal, GoTo, Outcome, Request, Stop
 from control.servoing.report import Report
 from hw_profiles.errors import DeviceError, PalmloopError
 from hw_profiles.rig import Rig
-from service.children import die_with_parent
+from service.children import ask_for_priority, die_with_parent
 from service.devices.clock import MonotonicClock
 from service.devices.servo_port import SerialPort
 from service.loop import Loop
@@ -67,7 +66,7 @@ def run_control(wiring: Wiring) -> None:
     wiring.requests.send("")
     gc.collect()
     gc.freeze()
-    scheduling = _ask_for_priority()
+    scheduling = ask_for_priority(PRIORITY)
     try:
         _Server(wiring, loop, snapshot, picture, scheduling).serve()
     except (EOFError, BrokenPipeError):
@@ -89,14 +88,6 @@ def _assemble(wiring: Wiring) -> Loop:
 
 def _n_bytes(rig: Rig) -> int:
     return int(np.prod(frame_shape(rig)))
-
-
-def _ask_for_priority() -> str:
-    try:
-        os.sched_setscheduler(0, os.SCHED_FIFO, os.sched_param(PRIORITY))
-    except OSError:
-        return "normal (SCHED_FIFO was not granted: expect more jitter on a busy machine)"
-    return f"SCHED_FIFO {PRIORITY}"
 
 
 class _Server:

@@ -13,13 +13,14 @@ import numpy as np
 from hw_profiles.errors import DeviceError, DeviceTimeout
 from hw_profiles.geometry import Array, Pose2
 from hw_profiles.rig import Rig
-from service.children import die_with_parent
+from service.children import ask_for_priority, die_with_parent
 from service.shared import SharedBlock, frame_bytes, frame_from
 from service.simulated.bench import LockstepBench
 from service.simulated.variation import Variation
 from service.simulated.world import STEP_US
 from vision.frames import Frame
 
+PRIORITY = 10  # below the control process: the world must keep time, the hand must keep it better
 LATE_US = 200_000  # further behind than this the world does not try to catch up
 
 
@@ -39,6 +40,7 @@ def run_bench(rig: Rig, joints: Array, part_pose: Pose2, variation: Variation, s
     bench = LockstepBench(rig, joints, part_pose, variation, seed)
     try:
         line.send(os.ttyname(slave))
+        ask_for_priority(PRIORITY)
         _live(bench, master, block, line)
     except (EOFError, BrokenPipeError, ConnectionResetError):
         pass  # the parent is gone
