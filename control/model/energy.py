@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 from numba import njit
 
-from control.model.finger_energy import finger_chain, finger_least, is_far, working_room
+from control.model.finger_energy import RADIUS, finger_chain, finger_least, is_far, working_room
 from control.model.kinematics import MAX_LINKS, HandArrays, HandModel, centre_lines_kernel
 from control.model.pieces import Pieces, pieces_of
 from hw_profiles.errors import CommandError
@@ -169,17 +169,33 @@ def energy_over(
     """Kernel of `Energy.over`."""
     lines = centre_lines_kernel(hand, command)
     values[:] = 0.0
-    pose, shifts = np.empty(3), np.zeros(MAX_LINKS)
     for f in range(hand.base_mm.shape[0]):
-        a, b = hand.first[f], hand.first[f + 1]
-        chain, spans = finger_chain(hand, springs, command, f), working_room(b - a, pieces)
-        thickest = max(hand.link_radius_mm[a:b].max(), hand.tip_radius_mm[f])
-        for i in range(x_mm.shape[0]):
-            for j in range(y_mm.shape[0]):
-                pose[0], pose[1] = x_mm[i], y_mm[j]
-                if is_far(lines[f], b - a, thickest, pose, reach_mm):
-                    continue
-                for k in range(yaw_rad.shape[0]):
-                    pose[2] = yaw_rad[k]
-                    if values[i, j, k] < np.inf:
-                        values[i, j, k] += finger_least(chain, hand.base_mm[f], hand.base_yaw_rad[f], pose, pieces, spans, shifts)
+        add_finger(hand, finger_chain(hand, springs, command, f), lines[f], f, x_mm, y_mm, yaw_rad, pieces, reach_mm, values)
+
+
+@njit(cache=True)
+def add_finger(
+    hand: HandArrays,
+    chain: Array,
+    line_mm: Array,
+    f: int,
+    x_mm: Array,
+    y_mm: Array,
+    yaw_rad: Array,
+    pieces: Pieces,
+    reach_mm: float,
+    values: Array,
+) -> None:
+    """Add the energy of one finger, at a command whose centre line is given, to `values` over a grid."""
+    n = chain.shape[0]
+    spans, pose, shifts = working_room(n, pieces), np.empty(3), np.zeros(MAX_LINKS)
+    thickest = max(chain[:, RADIUS].max(), hand.tip_radius_mm[f])
+    for i in range(x_mm.shape[0]):
+        for j in range(y_mm.shape[0]):
+            pose[0], pose[1] = x_mm[i], y_mm[j]
+            if is_far(line_mm, n, thickest, pose, reach_mm):
+                continue
+            for k in range(yaw_rad.shape[0]):
+                pose[2] = yaw_rad[k]
+                if values[i, j, k] < np.inf:
+                    values[i, j, k] += finger_least(chain, hand.base_mm[f], hand.base_yaw_rad[f], pose, pieces, spans, shifts)

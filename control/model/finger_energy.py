@@ -62,9 +62,7 @@ def is_far(line_mm: Array, n_links: int, thickest_mm: float, pose: Array, reach_
 @njit(cache=True)
 def finger_least(chain: Array, base_mm: Array, base_yaw: float, pose: Array, pieces: Pieces, spans: Array, shifts: Array) -> float:
     """Least energy [mJ] of a finger that clears the part at `pose`; fills `shifts` (≥ n,), how far its joints are pushed off."""
-    cos, sin = math.cos(pose[2]), math.sin(pose[2])
-    dx, dy = base_mm[0] - pose[0], base_mm[1] - pose[1]
-    start = (cos * dx + sin * dy, -sin * dx + cos * dy, base_yaw - pose[2])
+    start = part_start(base_mm, base_yaw, pose[0], pose[1], pose[2])
     n = chain.shape[0]
     if n == 1:
         energy, shifts[0] = _last(chain, pieces, spans, 0, start)
@@ -73,6 +71,14 @@ def finger_least(chain: Array, base_mm: Array, base_yaw: float, pose: Array, pie
     else:
         energy = _three(chain, pieces, spans, start, shifts)
     return energy
+
+
+@njit(cache=True)
+def part_start(base_mm: Array, base_yaw: float, x_mm: float, y_mm: float, yaw_rad: float) -> Start:
+    """Where a finger stands and looks in the frame of a part at (x, y, yaw)."""
+    cos, sin = math.cos(yaw_rad), math.sin(yaw_rad)
+    dx, dy = base_mm[0] - x_mm, base_mm[1] - y_mm
+    return cos * dx + sin * dy, -sin * dx + cos * dy, base_yaw - yaw_rad
 
 
 @njit(cache=True)
@@ -98,7 +104,7 @@ def march_step(chain: Array, k: int) -> float:
 
 
 @njit(cache=True)
-def _blocked(chain: Array, pieces: Pieces, spans: Array, k: int, start: Start) -> int:
+def blocked(chain: Array, pieces: Pieces, spans: Array, k: int, start: Start) -> int:
     """Fill the blocked values of joint k; how many intervals, −1 for all."""
     x, y, yaw = start
     radius, tip = chain[k, RADIUS], chain[k, TIP]
@@ -109,7 +115,7 @@ def _blocked(chain: Array, pieces: Pieces, spans: Array, k: int, start: Start) -
 
 
 @njit(cache=True)
-def _is_free(chain: Array, spans: Array, k: int, start: Start, n: int, shift: float) -> bool:
+def is_free(chain: Array, spans: Array, k: int, start: Start, n: int, shift: float) -> bool:
     """Whether joint k may be shifted so: its own link clears the part."""
     value = chain[k, COMMAND] + shift
     if chain[k, SLIDES]:
@@ -126,7 +132,7 @@ def _cleared(chain: Array, spans: Array, k: int, start: Start, n: int, sense: fl
 
 
 @njit(cache=True)
-def _after(chain: Array, k: int, start: Start, shift: float) -> Start:
+def chain_after(chain: Array, k: int, start: Start, shift: float) -> Start:
     """Where the chain has come to behind joint k, shifted off its target."""
     x, y, yaw = start
     value = chain[k, COMMAND] + shift
@@ -139,7 +145,7 @@ def _after(chain: Array, k: int, start: Start, shift: float) -> Start:
 @njit(cache=True)
 def _last(chain: Array, pieces: Pieces, spans: Array, k: int, start: Start) -> tuple[float, float]:
     """Least energy of the last joint, and its shift: to the nearest free value, for H grows with |d|."""
-    n = _blocked(chain, pieces, spans, k, start)
+    n = blocked(chain, pieces, spans, k, start)
     if n < 0:
         return np.inf, 0.0
     command = chain[k, COMMAND]
@@ -154,9 +160,9 @@ def _last(chain: Array, pieces: Pieces, spans: Array, k: int, start: Start) -> t
 @njit(cache=True)
 def _pair_at(chain: Array, pieces: Pieces, spans: Array, k: int, start: Start, n: int, shift: float) -> tuple[float, float]:
     """Energy of joints k and k + 1 with k shifted so and k + 1 at its best; and the shift of k + 1."""
-    if not _is_free(chain, spans, k, start, n, shift):
+    if not is_free(chain, spans, k, start, n, shift):
         return np.inf, 0.0
-    energy, last = _last(chain, pieces, spans, k + 1, _after(chain, k, start, shift))
+    energy, last = _last(chain, pieces, spans, k + 1, chain_after(chain, k, start, shift))
     return energy + spring(chain, k, shift), last
 
 
@@ -173,7 +179,7 @@ def _is_valley(marched: Array, i: int, slack: float, best: float) -> bool:
 @njit(cache=True)
 def _pair(chain: Array, pieces: Pieces, spans: Array, k: int, start: Start, budget: float, is_final: bool) -> tuple[float, float, float]:
     """Least energy of the last two joints, k and k + 1, if below the budget (else inf), and their shifts; marched only, or narrowed."""
-    n = _blocked(chain, pieces, spans, k, start)
+    n = blocked(chain, pieces, spans, k, start)
     if n < 0:
         return np.inf, 0.0, 0.0
     step = march_step(chain, k)
@@ -238,7 +244,7 @@ def _narrow(
 @njit(cache=True)
 def _three(chain: Array, pieces: Pieces, spans: Array, start: Start, shifts: Array) -> float:
     """Least energy of a finger of three joints; fills their shifts."""
-    n = _blocked(chain, pieces, spans, 0, start)
+    n = blocked(chain, pieces, spans, 0, start)
     if n < 0:
         return np.inf
     step = march_step(chain, 0)
@@ -251,10 +257,10 @@ def _three(chain: Array, pieces: Pieces, spans: Array, start: Start, shifts: Arr
         tried = min(max(steps * step, low), high)
         if spring(chain, 0, steps * step) >= best:
             break
-        if abs(steps * step - tried) >= step or not _is_free(chain, spans, 0, start, n, tried):
+        if abs(steps * step - tried) >= step or not is_free(chain, spans, 0, start, n, tried):
             continue
         own = spring(chain, 0, tried)
-        energy, middle, pushed = _pair(chain, pieces, spans, 1, _after(chain, 0, start, tried), best + slack - own, False)
+        energy, middle, pushed = _pair(chain, pieces, spans, 1, chain_after(chain, 0, start, tried), best + slack - own, False)
         marched[N_STEPS + steps], middles[N_STEPS + steps], widest = energy + own, middle, abs(steps)
         if energy + own < best:
             best = energy + own
@@ -270,10 +276,10 @@ def _three(chain: Array, pieces: Pieces, spans: Array, start: Start, shifts: Arr
 @njit(cache=True)
 def _three_at(chain: Array, pieces: Pieces, spans: Array, start: Start, n: int, shift: float, near: float) -> tuple[float, float, float]:
     """Energy of a finger of three joints with the first shifted so and the second near a shift; and the shifts of both others."""
-    if not _is_free(chain, spans, 0, start, n, shift):
+    if not is_free(chain, spans, 0, start, n, shift):
         return np.inf, near, 0.0
-    here = _after(chain, 0, start, shift)
-    m = _blocked(chain, pieces, spans, 1, here)
+    here = chain_after(chain, 0, start, shift)
+    m = blocked(chain, pieces, spans, 1, here)
     if m < 0:
         return np.inf, near, 0.0
     step = 1.5 * march_step(chain, 1)
