@@ -38,4 +38,5 @@ $(VENV)/.sim: $(VENV)/bin/python pyproject.toml
 $(VENV)/.test: $(VENV)/bin/python pyproject.toml
 	@echo "installing palmloop and what its tests compare with (once; a minute or two)"
 	@$(BIN)/python -m pip install --quiet --disable-pip-version-check -e '.[test]'
+	@$(BIN)/python -m pip install --quiet --disable-pip-version-check --no-deps bd-warehouse  # only its ISO 4032 table is read
 	@touch $@ $(VENV)/.sim
