@@ -26,7 +26,8 @@ SAMPLES_PER_CELL_EDGE = 2
 TAP_PX = 0.5
 MAX_TAPS = 33
 N_ROUNDS = 24
-SETTLED_MM, SETTLED_RAD = 1e-4, 1e-5  # a smaller step ends the fit
+SETTLED_MM, SETTLED_RAD = 3e-4, 3e-5  # a smaller step ends the fit
+NEAR_MM = 0.02
 LOOSE_MM = 3e-3  # a larger step after the last round means there is no pose to be had
 LEAST_GAIN = 0.2
 UNSETTLED = -1
@@ -203,9 +204,10 @@ def _gauss_newton(
     widest, narrowest = min(max(0.48 * cell_px, 1.0), 7.0), min(max(0.36 * cell_px, 1.0), 3.0)
     rms, n_agreeing = 0.0, 0
     for turn in range(N_ROUNDS):
-        reach = max(widest * 0.75**turn, narrowest)
+        near = moved < NEAR_MM  # no need to look far any more
+        reach = narrowest if near else max(widest * 0.75**turn, narrowest)
         n_side = min(int(reach / TAP_PX + 0.5), (MAX_TAPS - 1) // 2)
-        keep_px = max(reach * 0.75**turn, INLIER_PX)
+        keep_px = INLIER_PX if near else max(reach * 0.75**turn, INLIER_PX)
         cos, sin = math.cos(pose[2]), math.sin(pose[2])
         for i in range(points.shape[0]):
             dx, dy = cos * points[i, 0] - sin * points[i, 1], sin * points[i, 0] + cos * points[i, 1]

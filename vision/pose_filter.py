@@ -6,9 +6,11 @@ with Applications to Tracking and Navigation, ch. 6.2). Time comes from the fram
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
+from numba import njit
 
 from hw_profiles.geometry import Array, Pose2, wrap_angle
 
@@ -45,8 +47,32 @@ def begin(at_us: int, pose: Pose2, covariance: Array) -> Belief:
 
 def transition(dt_s: float) -> tuple[Array, Array]:
     """Transition (6, 6) and process noise (6, 6) over dt_s: Q = q [[dt³/3, dt²/2], [dt²/2, dt]] per axis."""
+    step, noise = _transition(dt_s)
+    return step, noise
+
+
+def predict(belief: Belief, at_us: int) -> Belief:
+    """The belief carried to another instant (not earlier)."""
+    mean, covariance = _carry(belief.mean, belief.covariance, max(at_us - belief.at_us, 0) * 1e-6)
+    return Belief(at_us, mean, covariance)
+
+
+def surprise(belief: Belief, pose: Pose2, covariance: Array) -> float:
+    """Squared Mahalanobis distance of a measured pose from a belief at the same instant."""
+    return float(_distance(belief.mean, belief.covariance, pose.x_mm, pose.y_mm, pose.yaw_rad, covariance))
+
+
+def update(belief: Belief, pose: Pose2, covariance: Array) -> Belief:
+    """The belief after a pose measured at the same instant (Kalman 1960; Joseph's form keeps it positive definite)."""
+    mean, after = _weigh(belief.mean, belief.covariance, pose.x_mm, pose.y_mm, pose.yaw_rad, covariance)
+    return Belief(belief.at_us, mean, after)
+
+
+@njit(cache=True)
+def _transition(dt_s: float) -> tuple[Array, Array]:
     step, noise = np.eye(6), np.zeros((6, 6))
-    for axis, q in enumerate((MOVE_NOISE, MOVE_NOISE, TURN_NOISE)):
+    for axis in range(3):
+        q = MOVE_NOISE if axis < 2 else TURN_NOISE
         step[axis, axis + 3] = dt_s
         noise[axis, axis] = q * dt_s**3 / 3.0
         noise[axis, axis + 3] = noise[axis + 3, axis] = q * dt_s**2 / 2.0
@@ -54,28 +80,28 @@ def transition(dt_s: float) -> tuple[Array, Array]:
     return step, noise
 
 
-def predict(belief: Belief, at_us: int) -> Belief:
-    """The belief carried to another instant (not earlier)."""
-    step, noise = transition(max(at_us - belief.at_us, 0) * 1e-6)
-    return Belief(at_us, step @ belief.mean, step @ belief.covariance @ step.T + noise)
+@njit(cache=True)
+def _carry(mean: Array, covariance: Array, dt_s: float) -> tuple[Array, Array]:
+    step, noise = _transition(dt_s)
+    return step @ mean, step @ covariance @ step.T + noise
 
 
-def surprise(belief: Belief, pose: Pose2, covariance: Array) -> float:
-    """Squared Mahalanobis distance of a measured pose from a belief at the same instant."""
-    innovation = _innovation(belief, pose)
-    return float(innovation @ np.linalg.solve(belief.covariance[:3, :3] + covariance, innovation))
+@njit(cache=True)
+def _innovation(mean: Array, x_mm: float, y_mm: float, yaw_rad: float) -> Array:
+    turn = yaw_rad - mean[2]
+    return np.array([x_mm - mean[0], y_mm - mean[1], math.pi - (math.pi - turn) % (2.0 * math.pi)])
 
 
-def update(belief: Belief, pose: Pose2, covariance: Array) -> Belief:
-    """The belief after a pose measured at the same instant (Kalman 1960; Joseph's form keeps it positive definite)."""
-    gain = np.linalg.solve(belief.covariance[:3, :3] + covariance, belief.covariance[:3, :]).T
+@njit(cache=True)
+def _distance(mean: Array, covariance: Array, x_mm: float, y_mm: float, yaw_rad: float, noise: Array) -> float:
+    off = _innovation(mean, x_mm, y_mm, yaw_rad)
+    return float(off @ np.linalg.solve(covariance[:3, :3] + noise, off))
+
+
+@njit(cache=True)
+def _weigh(mean: Array, covariance: Array, x_mm: float, y_mm: float, yaw_rad: float, noise: Array) -> tuple[Array, Array]:
+    gain = np.ascontiguousarray(np.linalg.solve(covariance[:3, :3] + noise, np.ascontiguousarray(covariance[:3, :])).T)
     keep = np.eye(6)
     keep[:, :3] -= gain
-    after = keep @ belief.covariance @ keep.T + gain @ covariance @ gain.T
-    return Belief(belief.at_us, belief.mean + gain @ _innovation(belief, pose), after)
-
-
-def _innovation(belief: Belief, pose: Pose2) -> Array:
-    off = pose.as_array() - belief.mean[:3]
-    off[2] = wrap_angle(float(off[2]))
-    return off
+    after = keep @ covariance @ np.ascontiguousarray(keep.T) + gain @ noise @ np.ascontiguousarray(gain.T)
+    return mean + gain @ _innovation(mean, x_mm, y_mm, yaw_rad), after

@@ -29,6 +29,7 @@ MAX_TILT_RAD = math.radians(5.0)
 TILT_SDS = 3.0  # standard deviations a tilt must stand out by to be believed
 COAST_US = 400_000  # a prediction older than this is no place to look
 POSITION_FLOOR_MM, YAW_FLOOR_RAD = 0.004, 0.0004  # standard deviations below which calibration, not noise, decides
+FLOOR = np.diag([POSITION_FLOOR_MM**2, POSITION_FLOOR_MM**2, YAW_FLOOR_RAD**2])
 CUT_SIDES = 0.95  # half width of the cut-out, of the tag's side: holds the tag at any angle
 Cut = tuple[Pixels, tuple[int, int]]  # grey pixels and the (u, v) of their first
 
@@ -114,7 +115,7 @@ class TagTrack:
             return NoPose(f"tag {tag.id} {wrong}{glare}")
         # Neighbouring edges begin to pull, and glare moves edges by different amounts.
         smear = (1.0 + (self.quality.blur_cells / 0.25) ** 4) * (1.0 + 3.0 * self.quality.saturated)
-        return found.pose, found.covariance * smear + np.diag([POSITION_FLOOR_MM**2, POSITION_FLOOR_MM**2, YAW_FLOOR_RAD**2])
+        return found.pose, found.covariance * smear + FLOOR
 
     def _cut(self, pixels: Pixels, pose: Pose2, sides: float = CUT_SIDES) -> Cut | None:
         """Grey cut-out around the tag; None where the tag is outside the image."""
