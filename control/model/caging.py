@@ -74,6 +74,12 @@ class Ring:
         margin_mm = _certify(self.hand.arrays, self.arrays, joints, pose, gaps)
         return RingCertificate(margin_mm > 0.0, margin_mm, gaps)
 
+    def bridges(self, joints: Array, pose: Array) -> Array:
+        """The bridges (n_fingers, 2, 2) [mm] that `gaps_mm` are of, end to end on the fingers' surfaces; nan where there is none."""
+        bridges, gaps = np.empty((self.hand.n_fingers, 4)), np.empty(self.hand.n_fingers)
+        survey(self.hand.arrays, self.arrays, centre_lines_kernel(self.hand.arrays, joints), pose, gaps, bridges)
+        return bridges.reshape(-1, 2, 2)
+
 
 @njit(cache=True)
 def _certify(hand: HandArrays, ring: RingArrays, joints: Array, pose: Array, gaps_mm: Array) -> float:
@@ -83,12 +89,39 @@ def _certify(hand: HandArrays, ring: RingArrays, joints: Array, pose: Array, gap
 @njit(cache=True)
 def ring_margin(hand: HandArrays, ring: RingArrays, lines_mm: Array, pose: Array, gaps_mm: Array) -> float:
     """Kernel of `Ring.certify`: fills `gaps_mm` and returns the margin, −passes_mm where no ring runs round the part."""
+    bridges = np.empty((lines_mm.shape[0], 4))
+    return survey(hand, ring, lines_mm, pose, gaps_mm, bridges)
+
+
+@njit(cache=True)
+def survey(hand: HandArrays, ring: RingArrays, lines_mm: Array, pose: Array, gaps_mm: Array, bridges_mm: Array) -> float:
+    """`ring_margin`, and the bridges (n_fingers, 4) that the gaps are of: x, y of either end, on the fingers' surfaces."""
     n, limit_mm = lines_mm.shape[0], 2.0 * ring.passes_mm
     cos, sin = math.cos(pose[2]), math.sin(pose[2])
     eye_x = pose[0] + cos * ring.centre_mm[0] - sin * ring.centre_mm[1]
     eye_y = pose[1] + sin * ring.centre_mm[0] + cos * ring.centre_mm[1]
-    spine = np.empty((n, MAX_LINKS + 1, N_SPINE))
-    n_links = np.empty(n, np.int64)
+    spine, n_links = _spines(hand, lines_mm, eye_x, eye_y)
+    narrowest, ends = np.empty((n, n, 2 * N_TURNS + 1)), np.empty((n, n, 2 * N_TURNS + 1, 4))
+    narrowest[:] = limit_mm
+    for f in range(n):
+        for g in range(n):
+            _lay_bridges(ring, spine, n_links, limit_mm, pose, f, g, narrowest, ends)
+    for k in range(n):
+        f, g = ring.order[k], ring.order[(k + 1) % n]
+        round_part = 1 if _bearing(spine[g, 0, 0], spine[g, 0, 1]) <= _bearing(spine[f, 0, 0], spine[f, 0, 1]) else 0
+        there, back = narrowest[f, g, N_TURNS + round_part], narrowest[g, f, N_TURNS - round_part]
+        gaps_mm[k] = min(there, back)
+        for axis in range(4):
+            end = ends[f, g, N_TURNS + round_part, axis] if there <= back else ends[g, f, N_TURNS - round_part, axis]
+            bridges_mm[k, axis] = np.nan if gaps_mm[k] >= limit_mm else end + (eye_x if axis % 2 == 0 else eye_y)
+    return ring.passes_mm - _widest_of_best_ring(narrowest, limit_mm)
+
+
+@njit(cache=True)
+def _spines(hand: HandArrays, lines_mm: Array, eye_x: float, eye_y: float) -> tuple[Array, NDArray[np.int64]]:
+    """The spine of every finger (n_fingers, MAX_LINKS + 1, N_SPINE), and how many links it has."""
+    n = lines_mm.shape[0]
+    spine, n_links = np.empty((n, MAX_LINKS + 1, N_SPINE)), np.empty(n, np.int64)
     for f in range(n):
         first, m = hand.first[f], hand.first[f + 1] - hand.first[f]
         n_links[f] = m
@@ -99,16 +132,7 @@ def ring_margin(hand: HandArrays, ring: RingArrays, lines_mm: Array, pose: Array
             before = spine[f, k - 1, TURNS] + _turn(spine[f, k - 1, 0], spine[f, k - 1, 1], x, y) if k > 0 else 0.0
             spine[f, k, 0], spine[f, k, 1], spine[f, k, TURNS] = x, y, before
             spine[f, k, JOINT_RADIUS], spine[f, k, LINK_RADIUS] = max(inner, outer), outer
-    narrowest = np.empty((n, n, 2 * N_TURNS + 1))
-    narrowest[:] = limit_mm
-    for f in range(n):
-        for g in range(n):
-            _lay_bridges(ring, spine, n_links, limit_mm, pose, f, g, narrowest)
-    for k in range(n):
-        f, g = ring.order[k], ring.order[(k + 1) % n]
-        round_part = 1 if _bearing(spine[g, 0, 0], spine[g, 0, 1]) <= _bearing(spine[f, 0, 0], spine[f, 0, 1]) else 0
-        gaps_mm[k] = min(narrowest[f, g, N_TURNS + round_part], narrowest[g, f, N_TURNS - round_part])
-    return ring.passes_mm - _widest_of_best_ring(narrowest, limit_mm)
+    return spine, n_links
 
 
 @njit(cache=True)
@@ -130,7 +154,7 @@ def _bearing(x: float, y: float) -> float:
 
 @njit(cache=True)
 def _lay_bridges(
-    ring: RingArrays, spine: Array, n_links: NDArray[np.int64], limit_mm: float, pose: Array, f: int, g: int, narrowest: Array
+    ring: RingArrays, spine: Array, n_links: NDArray[np.int64], limit_mm: float, pose: Array, f: int, g: int, narrowest: Array, ends: Array
 ) -> None:
     """Bridges shorter than the limit from every joint of finger f, and its tip, to the joints and the flanks of finger g."""
     narrow_mm, passes_mm = 2.0 * ring.radius_mm, ring.passes_mm
@@ -164,6 +188,9 @@ def _lay_bridges(
                 k = N_TURNS + int(turned)
                 if 0 <= k <= 2 * N_TURNS and gap < narrowest[f, g, k]:
                     narrowest[f, g, k] = gap
+                    vx, vy = (bx - ax) / length, (by - ay) / length
+                    ends[f, g, k, 0], ends[f, g, k, 1] = ax + r_f * vx, ay + r_f * vy
+                    ends[f, g, k, 2], ends[f, g, k, 3] = bx - r_g * vx, by - r_g * vy
 
 
 @njit(cache=True)

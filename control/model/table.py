@@ -58,7 +58,8 @@ class EnergyTable:
     def of(cls, energy: Energy, grid: PoseGrid) -> EnergyTable:
         """Make the table: some 0.3 s for 64 × 64 poses, three fingers and a hexagon; about 10 MB a finger."""
         hand = energy.hand
-        tables, firsts = [], []
+        tables: list[Table | None] = []
+        firsts: list[Array] = []
         for f in range(hand.n_fingers):
             chain = finger_chain(hand.arrays, energy.springs, hand.home, f)
             first = _march(chain) if len(chain) == 2 else np.zeros(1)
