@@ -13,7 +13,7 @@ from control.model.kinematics import HandModel
 from hw_profiles.camera import Camera, Mount
 from hw_profiles.geometry import Array, Pose2
 from hw_profiles.load import load_camera, load_hand, load_part
-from hw_profiles.part import Part
+from hw_profiles.part import Fiducial, Part
 from service.simulated.camera import Renderer
 from vision import pattern
 from vision.camera_model import model_of
@@ -39,8 +39,10 @@ def camera_of(width_px: int = 1280, height_px: int = 720, tilt_deg: float = 15.0
 
 
 def part_of(name: str = "roller-40", tag_mm: float = 16.0) -> Part:
-    """A shipped part with a tag of another size."""
+    """A shipped part, its tag, if it has one, of another size."""
     part = load_part(name)
+    if not isinstance(part.fiducial, Fiducial):
+        return part
     return part.model_copy(update={"fiducial": part.fiducial.model_copy(update={"size_mm": tag_mm})})
 
 

@@ -24,7 +24,7 @@ from rich.table import Table
 from hw_profiles.camera import Camera
 from hw_profiles.geometry import Array, Pose2, wrap_angle
 from hw_profiles.observation import PartPose
-from hw_profiles.part import Part, Spots
+from hw_profiles.part import Part
 from tests.benchmarks.made_frames import Bench, Spoiled, camera_of, motion, part_of
 from vision import fiducial, pattern
 from vision.camera_model import model_of
@@ -115,8 +115,7 @@ def pupil_errors(camera: Camera, part: Part, frames: list[tuple[Pose2, Frame]]) 
 
 def spots_part() -> Part:
     """A roller with two coloured spots."""
-    spots = Spots(family="two-spots", spot_mm=8.0, spacing_mm=15.0, first_rgb=(205, 40, 50), second_rgb=(30, 90, 200))
-    return part_of().model_copy(update={"name": "roller-40-spots", "fiducial": spots})
+    return part_of("roller-40-spots")
 
 
 def colour(n: int) -> None:

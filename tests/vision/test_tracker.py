@@ -41,7 +41,7 @@ def run(bench: Bench, n: int, seed: int, spoiled: Spoiled) -> tuple[np.ndarray, 
 
 
 def test_noise_at_720p_is_below_a_hundredth_of_a_millimetre(bench: Bench) -> None:
-    errors, none = run(bench, 60, 11, Spoiled())
+    errors, none = run(bench, 40, 11, Spoiled())
     assert none == 0
     assert np.sqrt(np.mean(errors[:, 0] ** 2) / 2) < 0.01
     assert np.sqrt(np.mean(errors[:, 1] ** 2)) < 0.05
@@ -61,7 +61,7 @@ def test_noise_at_720p_is_below_a_hundredth_of_a_millimetre(bench: Bench) -> Non
     ids=["40 % covered", "blur", "dark", "bright", "glare", "smear", "all"],
 )
 def test_spoiled_frames_are_tracked_and_never_wrong(bench: Bench, spoiled: Spoiled) -> None:
-    errors, none = run(bench, 40, 12, spoiled)
+    errors, none = run(bench, 25, 12, spoiled)
     assert none <= 2
     assert errors[:, 0].max() < 0.5
     assert errors[:, 1].max() < 2.0
@@ -176,7 +176,7 @@ def test_mono_frames_are_tracked_as_well() -> None:
 def test_bias_stays_small_at_any_tilt_of_the_camera(tilt_deg: float) -> None:
     tilted = Bench(camera_of(tilt_deg=tilt_deg, roll_deg=30.0), part_of("nut-m30"), 6)
     tracker, found = Tracker(tilted.camera, tilted.part), []
-    poses, _ = motion(np.random.default_rng(7), 25)
+    poses, _ = motion(np.random.default_rng(7), 15)
     for index, pose in enumerate(poses):
         sight = tracker.observe(tilted.frame(index, pose, np.zeros(3), Spoiled())).sight
         assert isinstance(sight, PartPose)
