@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 from functools import lru_cache
+from itertools import product
 
 import numpy as np
 
@@ -22,11 +23,12 @@ from hw_profiles.part import Part
 
 ANGLE_STEP_RAD = math.radians(15.0)
 N_GRASPS = 3  # kept for one part angle
-N_TRIED = 12
+N_TRIED = 30
 NEW_SHARE = 0.15  # of the poses held so far that a further grasp must add
-PARK_PHASES_RAD = np.radians(np.arange(0.0, 95.0, 5.0))
+PARK_PHASES_RAD = np.radians(np.arange(-90.0, 95.0, 5.0))
 PARK_OPENINGS_MM = (16.0, 14.0, 12.0, 10.0, 8.0, 6.0, 4.0, 3.0, 2.0)
 PARK_MARGIN_MM = 2.0
+WRAP_PER_MM = 4.0  # degrees of wrapping that a mm of opening is worth
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -167,25 +169,21 @@ def _cells(reach: Reach) -> Array:
 
 
 def park_posture(bench: Bench) -> Array:
-    """The widest ring of fingers about the palm centre whose gaps still hold the part in, wherever inside it lies.
+    """A wide ring of fingers about the palm centre whose gaps still hold the part in, wherever inside it lies.
 
-    Where no ring does (no cage required), the widest that the fingers can form.
+    Wide, and wrapping the part no more than it must, so that the way into every grasp is short. Where no ring holds the part in (no
+    cage required), the one with the narrowest gaps among the widest.
     """
-    widest: Array | None = None
-    for opening_mm in PARK_OPENINGS_MM:
-        best_margin, best = -math.inf, None
-        for phase in np.concatenate([-PARK_PHASES_RAD, PARK_PHASES_RAD[1:]]):
-            joints, left_mm = ring_posture(bench, float(phase), opening_mm)
-            if left_mm > LEFT_MM or bench.clearances.between_fingers(joints) < FINGERS_APART_MM:
-                continue
-            margin_mm = bench.ring.certify(joints, np.zeros(3)).margin_mm
-            if margin_mm > best_margin:
-                best_margin, best = margin_mm, joints
-        if best is not None and best_margin >= PARK_MARGIN_MM:
-            return best
-        if best is not None and widest is None:
-            widest = best
-    return bench.hand.home if widest is None else widest
+    best, best_cost = bench.hand.home, math.inf
+    for opening_mm, phase in product(PARK_OPENINGS_MM, PARK_PHASES_RAD):
+        joints, left_mm = ring_posture(bench, float(phase), opening_mm)
+        if left_mm > LEFT_MM or bench.clearances.between_fingers(joints) < FINGERS_APART_MM:
+            continue
+        lack_mm = max(PARK_MARGIN_MM - bench.ring.certify(joints, np.zeros(3)).margin_mm, 0.0)
+        cost = abs(math.degrees(phase)) + WRAP_PER_MM * (PARK_OPENINGS_MM[0] - opening_mm) + 1000.0 * lack_mm
+        if cost < best_cost:
+            best, best_cost = joints, cost
+    return best
 
 
 def ring_posture(bench: Bench, phase_rad: float, opening_mm: float) -> tuple[Array, float]:

@@ -10,10 +10,11 @@ from control.grasping.library import Library
 from control.grasping.transfer import Speeds
 from control.model.kinematics import HandModel
 from control.wire.pulses import PulseMap
+from hw_profiles.errors import CommandError
 from hw_profiles.geometry import Array
 from hw_profiles.rig import Rig
 
-REQUIRED_MARGIN_MM = 2.0  # what the commanded posture must show, so that the real fingers still cage
+REQUIRED_MARGIN_MM = 1.0  # what the touching posture must show; pressed, as it is commanded, it shows more
 
 
 @dataclass(frozen=True, slots=True)
@@ -46,10 +47,19 @@ class Controller:
 
     @classmethod
     def of(cls, rig: Rig) -> Controller:
-        """Prepare a rig; searches the grasps of its hand on its part (about a second)."""
+        """Prepare a rig; searches the grasps of its hand on its part (a second or a few).
+
+        Raises
+        ------
+        CommandError
+            The hand cannot hold the part, or not with the cage that the rig requires.
+        """
         hand = HandModel(rig.hand)
         margin_mm = REQUIRED_MARGIN_MM if rig.cage == "required" else -math.inf
         library = Library.of(hand, rig.part, margin_mm, rig.motion.clearance_mm)
+        if not library.reaches:
+            caged = " with a certified cage; allowed: another part, or cage = 'preferred' in the rig" if rig.cage == "required" else ""
+            raise CommandError(f"rig '{rig.name}': hand '{rig.hand.name}' finds no way to hold part '{rig.part.name}'{caged}")
         return cls(rig, hand, PulseMap.of(rig), library)
 
     @cached_property
