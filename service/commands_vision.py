@@ -15,15 +15,13 @@ from rich.table import Table
 
 from hw_profiles import load
 from hw_profiles.calibration import Calibration
-from hw_profiles.errors import CalibrationError, DeviceError, Problem, ProfileError
-from hw_profiles.geometry import Array, Pose2
+from hw_profiles.errors import DeviceError, Problem, ProfileError
 from hw_profiles.observation import PartPose
 from hw_profiles.rig import Rig
-from service import calibrations, sources, tracking
+from service import calibrating, calibrations, sources, tracking
 from service.ports import Camera
 from vision import calibrate as lens_maths
 from vision import calibrate_plate, print_board, print_mark, teach
-from vision.calibrate import Board, View
 from vision.camera_model import model_of
 from vision.tracker import Tracker
 
@@ -42,7 +40,7 @@ def board(
     square_mm: Annotated[float, typer.Option(help="side of a square", min=5.0, max=80.0)] = 22.0,
 ) -> None:
     """Print the calibration board at true scale."""
-    _write(out, print_board.board_sheet(_board(square_mm), _sheet_form(out, "calibrate board")))
+    _write(out, print_board.board_sheet(calibrating.board_of(square_mm), _sheet_form(out, "calibrate board")))
     Console(highlight=False).print(f"✔ {out}: print at 100 % and check that the bar measures 100 mm; glue the sheet on something flat")
 
 
@@ -67,7 +65,7 @@ def camera(
 ) -> None:
     """Calibrate the lens from pictures of the board held at many places and angles."""
     loaded = load.load_rig(rig)
-    views = _collect_views(loaded, source, _board(square_mm), max_views, Console(stderr=True, highlight=False))
+    views = calibrating.collect_views(loaded, source, calibrating.board_of(square_mm), max_views, Console(stderr=True, highlight=False))
     found = lens_maths.solve_lens(views, loaded.camera, f"{len(views)} views of {source}, squares of {square_mm:g} mm", _today())
     path = _keep(rig, loaded, found)
     if as_json:
@@ -99,9 +97,9 @@ def plate(
     made = calibrations.calibrated(loaded, calibrations.folder_of(rig), _today()) if _has_lens(rig, loaded) else None
     seen_by = loaded.camera if made is None else made.rig.camera
     if mark:
-        marks_mm, marks_px, made_from = *_marks(mark), f"{len(mark)} marks"
+        marks_mm, marks_px, made_from = *calibrating.marks(mark), f"{len(mark)} marks"
     else:
-        marks_mm, marks_px, made_from = _board_on_plate(loaded, source, _board(square_mm), board_at)
+        marks_mm, marks_px, made_from = calibrating.board_on_plate(loaded, source, calibrating.board_of(square_mm), board_at)
     found = calibrate_plate.solve_plate(marks_mm, marks_px, seen_by, made_from, _today(), thickness_mm)
     path = _keep(rig, loaded, found)
     if as_json:
@@ -126,7 +124,7 @@ def colour(
     """Teach the colours of a part's two spots, in the light they will be seen in."""
     loaded = load.load_rig(rig, part)
     model = model_of(loaded.camera)
-    given = None if not at else np.array([_numbers(text, 2, "--at", "U,V") for text in at])
+    given = None if not at else np.array([calibrating.numbers(text, 2, "--at", "U,V") for text in at])
     if given is not None and len(given) != 2:
         raise ProfileError([Problem("calibrate colour", "--at", str(at), "allowed: given twice, first spot then second")])
     samples = []
@@ -211,74 +209,11 @@ def _print_summary(console: Console, found: tracking.Track) -> None:
         console.print(f"{times} frames without a pose: {reason}")
 
 
-def _collect_views(rig: Rig, source: str, wanted: Board, max_views: int, console: Console) -> list[View]:
-    """Views of the board that differ from the ones before; says what the next should show."""
-    views: list[View] = []
-    size = (rig.camera.width_px, rig.camera.height_px)
-    device = sources.open_source(source, rig, 0, 0)
-    live = source.startswith("/dev/")
-    try:
-        with console.status("looking for the board") as status:
-            for index, frame in enumerate(tracking.frames_of(device, None)):
-                view = lens_maths.detect(wanted, frame.pixels, f"picture {index + 1}")
-                if view is None or (live and not lens_maths.is_new(view, views)):
-                    continue
-                views.append(view)
-                hint = lens_maths.guidance(views, size)
-                status.update(f"{len(views)} views; {hint or 'enough, a few more will do no harm'}")
-                if len(views) == max_views or (live and not hint and len(views) >= max_views // 2):
-                    break
-    finally:
-        device.close()
-    return views
-
-
-def _board_on_plate(rig: Rig, source: str, wanted: Board, board_at: str | None) -> tuple[Array, Array, str]:
-    device = sources.open_source(source, rig, 0, 0)
-    try:
-        views = [lens_maths.detect(wanted, frame.pixels, source) for frame in tracking.frames_of(device, 20)]
-    finally:
-        device.close()
-    best = max((view for view in views if view is not None), key=lambda view: len(view.in_image_px), default=None)
-    if best is None:
-        raise CalibrationError(
-            f"no board seen in {source}: does it lie in view, in even light, printed with squares of {wanted.square_mm:g} mm?"
-        )
-    width, height = wanted.size_mm
-    x_mm, y_mm, deg = (-width / 2.0, height / 2.0, 0.0) if board_at is None else _numbers(board_at, 3, "--board-at", "X,Y,DEG")
-    marks_mm, marks_px = calibrate_plate.marks_of(best, Pose2(x_mm, y_mm, math.radians(deg)))
-    return marks_mm, marks_px, f"board of {wanted.square_mm:g} mm squares in {source}"
-
-
-def _marks(texts: list[str]) -> tuple[Array, Array]:
-    pairs = []
-    for text in texts:
-        on_plate, equals, in_picture = text.partition("=")
-        if not equals:
-            raise ProfileError([Problem("calibrate plate", "--mark", repr(text), "allowed: X,Y=U,V")])
-        pairs.append((_numbers(on_plate, 2, "--mark", "X,Y=U,V"), _numbers(in_picture, 2, "--mark", "X,Y=U,V")))
-    return np.array([pair[0] for pair in pairs]), np.array([pair[1] for pair in pairs])
-
-
-def _numbers(text: str, n: int, option: str, form: str) -> list[float]:
-    try:
-        values = [float(word) for word in text.split(",")]
-    except ValueError:
-        values = []
-    if len(values) != n or not all(math.isfinite(value) for value in values):
-        raise ProfileError([Problem("calibrate", option, repr(text), f"allowed: {form}, numbers parted by commas")])
-    return values
-
-
 def _sheet_form(out: Path, command: str) -> Literal["pdf", "png"]:
     form = out.suffix.lower()
     if form not in (".pdf", ".png"):
         raise ProfileError([Problem(command, "OUT", repr(str(out)), "allowed: a name ending in .pdf or .png")])
     return "pdf" if form == ".pdf" else "png"
-
-
-def _board(square_mm: float) -> Board:
-    return Board(square_mm=square_mm, marker_mm=square_mm * 16.0 / 22.0)
 
 
 def _has_lens(rig_name: str, rig: Rig) -> bool:

@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
-import time
 from pathlib import Path
 
 from hw_profiles.errors import DeviceError
 from hw_profiles.rig import Rig
+from service.devices.clock import MonotonicClock
 from service.devices.pictures_on_disk import PictureFolder, VideoFile
 from service.devices.webcam import Webcam
 from service.ports import Camera
@@ -14,13 +14,6 @@ from service.simulated.tour import Tour
 
 SIMULATED = "simulated"
 MEANINGS = f"a camera device such as /dev/video0, a video file, a folder of pictures, or '{SIMULATED}'"
-
-
-class _WallClock:
-    """The monotonic clock of this computer, which V4L2 stamps its buffers by."""
-
-    def now_us(self) -> int:
-        return time.monotonic_ns() // 1000
 
 
 def open_source(source: str, rig: Rig, n_frames: int, seed: int) -> Camera:
@@ -33,5 +26,5 @@ def open_source(source: str, rig: Rig, n_frames: int, seed: int) -> Camera:
     if path.is_file():
         return VideoFile(rig.camera, path)
     if path.is_char_device() or source.startswith("/dev/"):
-        return Webcam(rig.camera, source, _WallClock())
+        return Webcam(rig.camera, source, MonotonicClock())
     raise DeviceError(f"source '{source}': no such thing; allowed: {MEANINGS}")

@@ -14,7 +14,7 @@ import numpy as np
 from hw_profiles.geometry import Array, Pose2
 from hw_profiles.observation import NoPose, PartPose
 from hw_profiles.part import Fiducial, Part
-from vision import edge_checks, edge_fit, fiducial, pose_filter
+from vision import cell_search, edge_checks, edge_fit, fiducial, pose_filter
 from vision.camera_model import CameraModel
 from vision.edge_checks import Quality
 from vision.edge_fit import EdgeFit, EdgeTemplate, NoFit
@@ -96,7 +96,7 @@ class TagTrack:
         if cut is None:
             return None
         return self._fit(
-            cut, edge_checks.search(self._model, *cut, self._template, self.part.height_mm, expected.pose, reach_mm, reach_rad)
+            cut, cell_search.search(self._model, *cut, self._template, self.part.height_mm, expected.pose, reach_mm, reach_rad)
         )
 
     def _is_sure(self) -> bool:

@@ -8,6 +8,7 @@ import pytest
 from control.model.kinematics import HandModel, contact_centres
 from hw_profiles.geometry import Array, Pose2
 from hw_profiles.load import load_rig, shipped
+from service.simulated import brush
 from service.simulated import camera as rendering
 from service.simulated.camera import FINGER_ABOVE_MM, Renderer
 from tests.benchmarks.made_frames import camera_of, leaning_tag, part_of
@@ -111,15 +112,15 @@ def test_row_span_holds_every_pixel_within_reach() -> None:
         plane = flat_map(60, 60).astype(float)
         near = distance(plane, bar[:2], bar[2:4]) <= bar[4]
         for v in range(60):
-            first, last = rendering._row_span(bar, v, 60)
+            first, last = brush.row_span(bar, v, 60)
             assert near[v].sum() == near[v, first:last].sum()
 
 
 def test_capsules_are_drawn_where_their_distance_says() -> None:
     plane, canvas = flat_map(60, 80), np.full((60, 80, 3), 10, np.uint8)
     capsule = np.array([[15.0, 20.0, 60.0, 40.0, 6.0, 200.0, 150.0, 100.0]])
-    bars, quiet = np.array([[15.0, 20.0, 60.0, 40.0, 9.0]]), np.zeros(rendering.BANK, np.int8)
-    rendering._draw_capsules(canvas, plane, capsule, bars, rendering.LIGHT, 1.0, quiet, 0)
+    bars, quiet = np.array([[15.0, 20.0, 60.0, 40.0, 9.0]]), np.zeros(brush.BANK, np.int8)
+    brush.draw_capsules(canvas, plane, capsule, bars, rendering.LIGHT, 1.0, quiet, 0)
     away = distance(plane.astype(float), capsule[0, :2], capsule[0, 2:4])
     assert np.all(canvas[away > 6.6] == 10)
     assert np.all(canvas[away < 5.0] > 20)
@@ -130,7 +131,7 @@ def test_capsules_are_drawn_where_their_distance_says() -> None:
 def test_shadows_darken_by_their_depth_and_no_farther_than_their_edge() -> None:
     plane, canvas = flat_map(60, 80), np.full((60, 80, 1), 200, np.uint8)
     capsule, bars = np.array([[20.0, 30.0, 60.0, 30.0, 5.0, 0, 0, 0]]), np.array([[20.0, 30.0, 60.0, 30.0, 12.0]])
-    rendering._shade(canvas, plane, capsule, bars, 4.0, 0.3)
+    brush.shade(canvas, plane, capsule, bars, 4.0, 0.3)
     away = distance(plane.astype(float), capsule[0, :2], capsule[0, 2:4])
     assert np.all(canvas[away > 10.5] == 200)
     assert np.all(np.abs(canvas[away < 0.5].astype(int) - 140) <= 3)
@@ -140,10 +141,10 @@ def test_texture_is_interpolated_and_averaged_over_the_poses() -> None:
     rng = np.random.default_rng(2)
     texture = rng.integers(0, 256, (20, 20, 2)).astype(np.uint8)
     texture[..., 1] = 255
-    plane, canvas, quiet = flat_map(12, 12), np.zeros((12, 12, 1), np.uint8), np.zeros(rendering.BANK, np.int8)
+    plane, canvas, quiet = flat_map(12, 12), np.zeros((12, 12, 1), np.uint8), np.zeros(brush.BANK, np.int8)
     poses = np.array([[6.0, 6.0, 0.3], [6.4, 6.1, 0.35]])
     low, high = np.array([0, 0]), np.array([12, 12])
-    rendering._draw_texture(canvas, plane, texture, np.array([1.3, 9.2, 9.7]), poses, low, high, quiet, 0)
+    brush.draw_texture(canvas, plane, texture, np.array([1.3, 9.2, 9.7]), poses, low, high, quiet, 0)
     wanted = []
     for x, y, yaw in poses:
         off = plane.astype(float) - [x, y]
@@ -162,7 +163,7 @@ def test_walls_are_blended_by_their_cover() -> None:
     canvas = np.full((6, 6, 3), 100, np.uint8)
     cover, shade = np.full((2, 3), 255, np.uint8), np.full((2, 3), 50, np.uint8)
     cover[0, 0] = shade[0, 0] = 0
-    rendering._draw_shaded(canvas, cover, shade, np.array([1.0, 2.0, 3.0]), 1, 2, np.zeros(rendering.BANK, np.int8), 0)
+    brush.draw_shaded(canvas, cover, shade, np.array([1.0, 2.0, 3.0]), 1, 2, np.zeros(brush.BANK, np.int8), 0)
     np.testing.assert_array_equal(canvas[2, 1], [100, 100, 100])
     np.testing.assert_array_equal(canvas[3, 3], [50, 100, 150])
     assert np.all(canvas[4:] == 100)

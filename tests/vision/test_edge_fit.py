@@ -8,7 +8,7 @@ from scipy import ndimage
 
 from hw_profiles.geometry import Pose2
 from tests.benchmarks.made_frames import camera_of, leaning_tag, part_of
-from vision import edge_checks, edge_fit
+from vision import cell_search, edge_checks, edge_fit
 from vision.camera_model import CameraModel, model_of
 from vision.edge_fit import EdgeTemplate
 
@@ -198,6 +198,6 @@ def test_search_finds_the_tag_from_a_cell_and_a_half_away() -> None:
     pixels = leaning_tag(MODEL.camera, PART, pose, 0.0, 0.0)
     for off in ((2.8, -2.0, 0.15), (-1.5, 2.9, -0.18), (0.0, 0.0, 0.0)):
         start = Pose2(pose.x_mm + off[0], pose.y_mm + off[1], pose.yaw_rad + off[2])
-        found = edge_checks.search(MODEL, pixels, (0, 0), TEMPLATE, PART.height_mm, start, 3.0, 0.21)
+        found = cell_search.search(MODEL, pixels, (0, 0), TEMPLATE, PART.height_mm, start, 3.0, 0.21)
         assert math.hypot(found.x_mm - pose.x_mm, found.y_mm - pose.y_mm) < 0.4 * TEMPLATE.cell_mm
         assert abs(found.yaw_rad - pose.yaw_rad) < math.radians(4.0)
