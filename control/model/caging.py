@@ -188,7 +188,7 @@ def _lay_bridges(
                 k = N_TURNS + int(turned)
                 if 0 <= k <= 2 * N_TURNS and gap < narrowest[f, g, k]:
                     narrowest[f, g, k] = gap
-                    vx, vy = (bx - ax) / length, (by - ay) / length
+                    vx, vy = (bx - ax) / max(length, 1e-9), (by - ay) / max(length, 1e-9)
                     ends[f, g, k, 0], ends[f, g, k, 1] = ax + r_f * vx, ay + r_f * vy
                     ends[f, g, k, 2], ends[f, g, k, 3] = bx - r_g * vx, by - r_g * vy
 
@@ -200,7 +200,7 @@ def _straddled(ring: RingArrays, pose: Array, ax: float, ay: float, bx: float, b
     The core lies on the side of the bridge away from where its support lines at the chord meet; docs/model.md, section 4.
     """
     cos, sin = math.cos(pose[2]), math.sin(pose[2])
-    ux, uy = (bx - ax) / length, (by - ay) / length
+    ux, uy = (bx - ax) / max(length, 1e-9), (by - ay) / max(length, 1e-9)
     vx, vy = cos * ux + sin * uy, -sin * ux + cos * uy  # the bridge's direction in the part frame
     off = ux * ay - uy * ax  # left of the bridge is positive; the centre stands at −off
     start = -(ux * ax + uy * ay)  # the centre's place along the bridge

@@ -78,7 +78,29 @@ def escape(energy: Energy, command: Array, pose: Pose2, n: int = 48, n_yaw: int 
     start_mj = energy.at(command, pose).energy_mj
     if end < 0:
         return Escape(math.inf, start_mj, np.zeros((0, 3)), np.zeros(0), None, math.inf)
-    return _measured(energy, command, start_mj, _route(int(end), came_from, origin, cell))
+    route = _straightened(energy, command, _route(int(end), came_from, origin, cell), cell)
+    return _measured(energy, command, start_mj, route)
+
+
+def _straightened(energy: Energy, command: Array, route: Array, cell: Array) -> Array:
+    """The same way with its steps drawn straight wherever that costs no more than the route's highest point, in poses half a cell apart."""
+
+    def along(a: Array, b: Array) -> Array:
+        reach = np.array([1.0, 1.0, energy.reach_mm])
+        n = max(1, math.ceil(float((np.abs(b - a) * reach).max()) / (0.5 * cell[0])))
+        return np.linspace(a, b, n + 1)
+
+    def highest(poses: Array) -> float:
+        return max(energy.at(command, Pose2.from_array(pose)).energy_mj for pose in poses)
+
+    level, here, kept = highest(route), 0, [route[:1]]
+    while here < len(route) - 1:
+        ahead = len(route) - 1
+        while ahead > here + 1 and highest(along(route[here], route[ahead])) > level + 1e-9:
+            ahead = here + max(1, (ahead - here) // 2)
+        kept.append(along(route[here], route[ahead])[1:])
+        here = ahead
+    return np.concatenate(kept)
 
 
 def _route(end: int, came_from: NDArray[np.int64], origin: Array, cell: Array) -> Array:
