@@ -17,6 +17,7 @@ from hw_profiles.geometry import Array, Pose2, wrap_angle
 GATE = 21.108  # chi-square of 3 degrees of freedom, 99.99 %
 MOVE_NOISE = 4.5e4  # mm²/s³: a part that reaches 60 mm/s within two frames of 20 ms
 TURN_NOISE = 54.0  # rad²/s³: 120 °/s within two frames
+COAST_US = 400_000  # a prediction farther than this is no place to look
 START_RATES = np.array([60.0, 60.0, 2.1]) ** 2
 
 
@@ -66,6 +67,20 @@ def update(belief: Belief, pose: Pose2, covariance: Array) -> Belief:
     """The belief after a pose measured at the same instant (Kalman 1960; Joseph's form keeps it positive definite)."""
     mean, after = _weigh(belief.mean, belief.covariance, pose.x_mm, pose.y_mm, pose.yaw_rad, covariance)
     return Belief(belief.at_us, mean, after)
+
+
+def recall(belief: Belief | None, at_us: int) -> Belief | None:
+    """The belief carried to a frame's time; None where it is too old to tell where to look, or from after that time."""
+    if belief is None or not 0 <= at_us - belief.at_us <= COAST_US:
+        return None
+    return predict(belief, at_us)
+
+
+def join(expected: Belief | None, at_us: int, pose: Pose2, covariance: Array) -> Belief:
+    """The belief after a pose that is known to be right: an update, or a new beginning where nothing like it was expected."""
+    if expected is None or surprise(expected, pose, covariance) > GATE:
+        return begin(at_us, pose, covariance)
+    return update(expected, pose, covariance)
 
 
 @njit(cache=True)

@@ -17,7 +17,6 @@ from vision.edge_checks import Quality
 from vision.frames import Frame, Pixels
 from vision.pose_filter import Belief
 
-COAST_US = 400_000
 MAX_SPACING_OFF = 0.008  # of the spacing, that the spots found may be off it
 AREA_RANGE = (0.85, 1.12)  # of a spot's area; a covered spot is smaller
 MAX_STRAYS = 0.04
@@ -40,21 +39,18 @@ class SpotTrack:
 
     def follow(self, frame: Frame) -> PartPose | NoPose:
         """The pose near where the part was expected, else wherever the two spots are found."""
-        expected = None
-        if self._belief is not None and frame.captured_at_us - self._belief.at_us <= COAST_US:
-            expected = pose_filter.predict(self._belief, frame.captured_at_us)
+        expected = pose_filter.recall(self._belief, frame.captured_at_us)
+        if expected is not None:
             found = self._measure(frame.pixels, expected.pose.apply(self._spots.centres_mm()))
             if not isinstance(found, NoPose) and pose_filter.surprise(expected, *found) <= pose_filter.GATE:
-                return self._accept(expected, *found)
+                return self._join(expected, frame.captured_at_us, *found)
         starts = self._search(frame.pixels)
         if isinstance(starts, NoPose):
             return starts
         found = self._measure(frame.pixels, starts)
         if isinstance(found, NoPose):
             return found
-        if expected is None or pose_filter.surprise(expected, *found) > pose_filter.GATE:
-            expected = pose_filter.begin(frame.captured_at_us, *found)
-        return self._accept(expected, *found)
+        return self._join(expected, frame.captured_at_us, *found)
 
     def _search(self, pixels: Pixels) -> Array | NoPose:
         """Middles (2, 2) [mm] of the best pair of spots in the whole frame."""
@@ -91,8 +87,8 @@ class SpotTrack:
         variance = 0.5 * (first.variance + second.variance) + FLOOR_MM**2
         return pose, np.diag([0.5 * variance, 0.5 * variance, 2.0 * variance / spacing**2])
 
-    def _accept(self, expected: Belief, pose: Pose2, covariance: Array) -> PartPose:
-        self._belief = pose_filter.update(expected, pose, covariance)
+    def _join(self, expected: Belief | None, at_us: int, pose: Pose2, covariance: Array) -> PartPose:
+        self._belief = pose_filter.join(expected, at_us, pose, covariance)
         return PartPose(pose, self._belief.pose, self._belief.twist, covariance)
 
 

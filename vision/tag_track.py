@@ -27,7 +27,6 @@ SURE_CELLS, SURE_EDGES = 0.72, 0.5  # a tag seen so well needs no prediction to 
 LEAST_CONSISTENT = 0.7
 MAX_TILT_RAD = math.radians(5.0)
 TILT_SDS = 3.0  # standard deviations a tilt must stand out by to be believed
-COAST_US = 400_000  # a prediction older than this is no place to look
 POSITION_FLOOR_MM, YAW_FLOOR_RAD = 0.004, 0.0004  # standard deviations below which calibration, not noise, decides
 FLOOR = np.diag([POSITION_FLOOR_MM**2, POSITION_FLOOR_MM**2, YAW_FLOOR_RAD**2])
 CUT_SIDES = 0.95  # half width of the cut-out, of the tag's side: holds the tag at any angle
@@ -48,12 +47,12 @@ class TagTrack:
     def follow(self, frame: Frame) -> PartPose | NoPose:
         """The pose near where the part was expected."""
         self.quality = None
-        if self._belief is None or frame.captured_at_us - self._belief.at_us > COAST_US:
+        expected = pose_filter.recall(self._belief, frame.captured_at_us)
+        if expected is None:
             return NoPose(f"tag {self.tag.id} is not in view: is it covered, out of the image or too dark?")
-        expected = pose_filter.predict(self._belief, frame.captured_at_us)
         near = self._near(frame.pixels, expected)
         if near is not None and not isinstance(near, NoPose):
-            return self._join(expected, *near)
+            return self._join(expected, frame.captured_at_us, *near)
         cut = self._cut(frame.pixels, expected.pose, 2.0)
         for sighting in self._finder.find(*cut, shrink=1) if cut else ():
             return self.restart(frame, sighting)
@@ -70,9 +69,7 @@ class TagTrack:
         found = None if cut is None else self._fit(cut, start)
         if found is None or isinstance(found, NoPose):
             return found or NoPose(f"tag {tag.id} stands at the rim of the image: bring the part back into view")
-        if self._belief is not None and frame.captured_at_us - self._belief.at_us <= COAST_US:
-            return self._join(pose_filter.predict(self._belief, frame.captured_at_us), *found)
-        return self._accept(pose_filter.begin(frame.captured_at_us, *found), *found)
+        return self._join(pose_filter.recall(self._belief, frame.captured_at_us), frame.captured_at_us, *found)
 
     def _near(self, pixels: Pixels, expected: Belief) -> tuple[Pose2, Array] | NoPose | None:
         """Pose and covariance by a fit at the expected pose, else at the best place around it; gated. None: outside the image."""
@@ -133,14 +130,8 @@ class TagTrack:
         grey = np.ascontiguousarray(cut if cut.ndim == 2 else cv2.cvtColor(cut, cv2.COLOR_BGR2GRAY), dtype=np.uint8)
         return grey, (u_0, v_0)
 
-    def _join(self, expected: Belief, pose: Pose2, covariance: Array) -> PartPose:
-        """Go on from the prediction, or begin anew where it was beside the point."""
-        if pose_filter.surprise(expected, pose, covariance) > pose_filter.GATE:
-            expected = pose_filter.begin(expected.at_us, pose, covariance)
-        return self._accept(expected, pose, covariance)
-
-    def _accept(self, expected: Belief, pose: Pose2, covariance: Array) -> PartPose:
-        self._belief = pose_filter.update(expected, pose, covariance)
+    def _join(self, expected: Belief | None, at_us: int, pose: Pose2, covariance: Array) -> PartPose:
+        self._belief = pose_filter.join(expected, at_us, pose, covariance)
         return PartPose(pose, self._belief.pose, self._belief.twist, covariance)
 
 

@@ -61,3 +61,22 @@ def test_irregular_frames_are_no_trouble() -> None:
     for at_us in (20_000, 60_000, 65_000, 200_000, 220_000):
         belief = pose_filter.update(pose_filter.predict(belief, at_us), Pose2(at_us * 2e-5, 0.0, 0.0), NOISE)
     assert belief.twist[0] == pytest.approx(20.0, abs=0.5)
+
+
+def test_an_old_belief_or_one_of_the_future_is_not_recalled() -> None:
+    belief = pose_filter.begin(1_000_000, Pose2(0.0, 0.0, 0.0), NOISE)
+    assert pose_filter.recall(None, 0) is None
+    assert pose_filter.recall(belief, 999_999) is None
+    assert pose_filter.recall(belief, 1_000_000 + pose_filter.COAST_US + 1) is None
+    assert pose_filter.recall(belief, 1_020_000) is not None
+
+
+def test_an_unexpected_pose_that_is_sure_starts_a_new_belief() -> None:
+    belief, truth = followed(30, np.array([10.0, 0.0, 0.0]), np.random.default_rng(4))
+    ahead = pose_filter.predict(belief, belief.at_us + 20_000)
+    near = pose_filter.join(ahead, ahead.at_us, Pose2.from_array(truth), NOISE)
+    assert near.covariance[0, 0] < ahead.covariance[0, 0]
+    assert near.covariance[3, 3] < ahead.covariance[3, 3]
+    far = pose_filter.join(ahead, ahead.at_us, Pose2(90.0, 0.0, 0.0), NOISE)
+    np.testing.assert_array_equal(far.mean, [90.0, 0.0, 0.0, 0.0, 0.0, 0.0])
+    np.testing.assert_array_equal(far.covariance[:3, :3], NOISE)
