@@ -29,6 +29,7 @@ RigOption = Annotated[str, typer.Option("--rig", help="shipped name or TOML file
 PartOption = Annotated[str | None, typer.Option("--part", help="another part: shipped name or TOML file")]
 Source = Annotated[str, typer.Argument(help=sources.MEANINGS)]
 Json = Annotated[bool, typer.Option("--json", help="one JSON object on stdout")]
+HEIGHT_WORTH_SAYING_MM = 0.5
 SQUARE_HELP = "side of a printed square, as measured"
 
 calibrate = typer.Typer(help="Calibrate the camera: its lens, its place over the plate, the colours of a part.", no_args_is_help=True)
@@ -205,6 +206,10 @@ def _print_summary(console: Console, found: tracking.Track) -> None:
     noise = summary.get("step_noise")
     if noise:
         console.print(f"noise of a single pose: {noise['x_mm']:.4f} and {noise['y_mm']:.4f} mm, {noise['yaw_deg']:.3f}°")
+    off_mm = summary.get("height_off_mm")
+    if off_mm is not None and abs(off_mm) > HEIGHT_WORTH_SAYING_MM:
+        way = "higher, or larger," if off_mm > 0 else "lower, or smaller,"
+        console.print(f"by its size the tag stands {abs(off_mm):.1f} mm {way} than its profile says: measure both, or calibrate the camera")
     for reason, times in found.reasons.most_common(5):
         console.print(f"{times} frames without a pose: {reason}")
 

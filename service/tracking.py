@@ -20,6 +20,7 @@ from hw_profiles.observation import NoPose, Observation, PartPose
 from hw_profiles.rig import Rig
 from service.ports import Camera
 from vision import overlay
+from vision.edge_checks import Quality
 from vision.frames import Frame
 from vision.tracker import Tracker
 
@@ -28,14 +29,18 @@ READ_TIMEOUT_S = 5.0
 
 @dataclass
 class Track:
-    """What was seen: times [s], poses (x, y [mm], yaw [deg, unwrapped]) and, for each frame without a pose, why."""
+    """What was seen: times [s], poses (x, y [mm], yaw [deg, unwrapped]) and, for each frame without a pose, why.
+
+    heights_off_mm : of tags, how much higher than its profile says the tag seems by its size, pose by pose.
+    """
 
     times_s: list[float] = field(default_factory=list)
     poses: list[tuple[float, float, float]] = field(default_factory=list)
+    heights_off_mm: list[float] = field(default_factory=list)
     reasons: Counter[str] = field(default_factory=Counter)
     n_frames: int = 0
 
-    def take(self, seen: Observation) -> None:
+    def take(self, seen: Observation, quality: Quality | None) -> None:
         """Add one frame."""
         self.n_frames += 1
         if isinstance(seen.sight, NoPose):
@@ -45,6 +50,8 @@ class Track:
         if self.poses:
             yaw += 360.0 * round((self.poses[-1][2] - yaw) / 360.0)
         self.times_s.append(seen.captured_at_us * 1e-6)
+        if quality is not None:
+            self.heights_off_mm.append(quality.height_off_mm)
         self.poses.append((seen.sight.measured.x_mm, seen.sight.measured.y_mm, yaw))
 
     def summary(self) -> dict[str, Any]:
@@ -56,6 +63,8 @@ class Track:
             for axis, name in enumerate(("x_mm", "y_mm", "yaw_deg")):
                 found[name] = {"first": poses[0, axis], "last": poses[-1, axis], "low": poses[:, axis].min(), "high": poses[:, axis].max()}
             found["step_noise"] = _step_noise(poses)
+        if self.heights_off_mm:
+            found["height_off_mm"] = float(np.median(self.heights_off_mm))
         found["without_pose"] = dict(self.reasons.most_common())
         return found
 
@@ -134,7 +143,7 @@ def follow(camera: Camera, tracker: Tracker, limit: int | None, annotator: Annot
     track = Track()
     for frame in frames_of(camera, limit):
         seen = tracker.observe(frame)
-        track.take(seen)
+        track.take(seen, tracker.qualities[0])
         if annotator is not None:
             annotator.write(frame, seen)
         yield seen, track

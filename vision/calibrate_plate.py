@@ -16,7 +16,6 @@ from hw_profiles.calibration import PlateCalibration
 from hw_profiles.camera import Camera, Mount
 from hw_profiles.errors import CalibrationError
 from hw_profiles.geometry import Array, Pose2
-from hw_profiles.part import Fiducial, Part
 from vision.calibrate import View
 from vision.camera_model import CameraModel, model_of
 
@@ -110,29 +109,6 @@ def mount_of(turn: Array, shift_mm: Array) -> Mount:
     right = np.cross(forward, up)
     roll = np.degrees(np.arctan2(-turn[0] @ up, turn[0] @ right))
     return level.model_copy(update={"roll_deg": float(roll)})
-
-
-def tag_height(camera: Camera, part: Part, corners_px: Array) -> float:
-    """Height [mm] over the plate at which a tag's corners (4, 2) have the size its profile says: a check of part and calibration.
-
-    Secant steps on the size seen; 1 % of the tag's size is about 4 mm of height, so the edges must be sharp and the tag's size known.
-    """
-    if not isinstance(part.fiducial, Fiducial):
-        raise ValueError(f"part '{part.name}' has no tag to measure the height with")
-    model, side = model_of(camera), part.fiducial.size_mm
-    low, high = part.height_mm, part.height_mm + 5.0
-    off_low, off_high = (_side(model, corners_px, z) - side for z in (low, high))
-    for _ in range(6):
-        low, high, off_low = high, high - off_high * (high - low) / (off_high - off_low), off_high
-        off_high = _side(model, corners_px, high) - side
-        if abs(off_high) < 1e-9 or off_high == off_low:
-            break
-    return float(high)
-
-
-def _side(model: CameraModel, corners_px: Array, z_mm: float) -> float:
-    corners = model.plane_points(corners_px, z_mm)
-    return float(np.mean(np.linalg.norm(np.roll(corners, -1, axis=0) - corners, axis=1)))
 
 
 def _refuse_bad_marks(marks_mm: Array, marks_px: Array) -> None:

@@ -35,6 +35,7 @@ class Quality:
     blur_px, blur_cells : standard deviation of the edge spread, lens and motion together, in pixels and in cells.
     saturated : share of white cells at the sensor's upper end.
     tilt_rad, tilt_sd_rad : angle between the tag and the plate, and its standard deviation (how well this view can tell).
+    height_off_mm, height_sd_mm : how much higher than its profile says the tag seems, by its size, and the standard deviation.
     """
 
     agreeing_x: float
@@ -47,6 +48,8 @@ class Quality:
     saturated: float
     tilt_rad: float
     tilt_sd_rad: float
+    height_off_mm: float
+    height_sd_mm: float
 
 
 def judge(model: CameraModel, grey: Pixels, corner_px: tuple[int, int], template: EdgeTemplate, z_mm: float, found: EdgeFit) -> Quality:
@@ -58,10 +61,10 @@ def judge(model: CameraModel, grey: Pixels, corner_px: tuple[int, int], template
     right, aside, saturated = _cell_shares(
         *place, template.centres, template.white, template.cell_mm, pose, level, CELL_THRESHOLD * contrast
     )
-    tilt, tilt_sd = _tilt(model.lens, model.motion, z_mm, template.points, template.normals, pose, found.samples, found.residual_px)
+    stance = _stance(model.lens, model.motion, z_mm, template.points, template.normals, pose, found.samples, found.residual_px)
     blur_px = math.sqrt(max(spread, 0.0))
     blur_cells = blur_px / (template.cell_mm * model.px_per_mm(found.pose.xy_mm, z_mm))
-    return Quality(x, y, right, aside, contrast, blur_px, blur_cells, saturated, tilt, tilt_sd)
+    return Quality(x, y, right, aside, contrast, blur_px, blur_cells, saturated, *stance)
 
 
 @njit(cache=True)
@@ -167,10 +170,10 @@ def _cell_shares(
 
 
 @njit(cache=True)
-def _tilt(
+def _stance(
     lens: Array, motion: Array, z_mm: float, points: Array, normals: Array, pose: Array, samples: Array, residual_px: float
-) -> tuple[float, float]:
-    """Tilt of the tag's plane against the plate and its standard deviation [rad].
+) -> tuple[float, float, float, float]:
+    """Tilt of the tag's plane against the plate [rad], height above where it should be [mm], each before its standard deviation.
 
     One Gauss–Newton step from the flat pose: x, y, yaw, height, the slopes of the height along x and y, and the bleed of edges. The
     slopes show through the camera's own obliqueness (to first order) and through perspective.
@@ -196,5 +199,6 @@ def _tilt(
     inverse = np.linalg.inv(matrix)
     solved = inverse @ vector
     slope = math.hypot(solved[4], solved[5])
-    variance = max(inverse[4, 4], inverse[5, 5]) * max(residual_px, EDGE_SD_PX) ** 2
-    return math.atan(slope), math.sqrt(variance)
+    edge_sd = max(residual_px, EDGE_SD_PX)
+    tilt_sd = math.sqrt(max(inverse[4, 4], inverse[5, 5])) * edge_sd
+    return math.atan(slope), tilt_sd, solved[3], math.sqrt(inverse[3, 3]) * edge_sd

@@ -12,8 +12,8 @@ from scipy.spatial.transform import Rotation
 from typer.testing import CliRunner, Result
 
 from hw_profiles.errors import PalmloopError
-from hw_profiles.load import load_camera
-from service import commands_vision
+from hw_profiles.load import DATA, load_camera, load_rig
+from service import commands_vision, sources
 from vision.calibrate import Board
 from vision.camera_model import model_of
 
@@ -76,6 +76,7 @@ def test_track_of_the_simulated_camera_prints_one_json_object_and_writes_its_fil
     assert found["not_calibrated"] == ["lens", "plate"]
     assert found["x_mm"]["first"] == pytest.approx(12.0, abs=0.02)
     assert found["step_noise"]["x_mm"] < 0.01
+    assert abs(found["height_off_mm"]) < 0.2
     rows = (folder / "out.csv").read_text().splitlines()
     assert rows[0] == "time_s,x_mm,y_mm,yaw_deg"
     assert len(rows) == 13
@@ -90,6 +91,17 @@ def test_track_prints_a_table_for_people() -> None:
     assert result.exit_code == 0
     assert "10 poses in 10 frames" in result.stdout
     assert "noise of a single pose" in result.stdout
+
+
+def test_track_says_when_the_part_is_higher_than_its_profile(folder: Path) -> None:
+    tour = sources.open_source("simulated", load_rig("trefoil"), 4, 0)
+    for index in range(4):
+        cv2.imwrite(str(folder / f"{index}.png"), tour.read(1.0).pixels)
+    tour.close()
+    profile = (DATA / "parts" / "roller-40.toml").read_text().replace("height_mm = 20.0", "height_mm = 18.5")
+    (folder / "low.toml").write_text(profile)
+    words = " ".join(run("track", str(folder), "--part", "low.toml").stdout.split())
+    assert "stands 1.4 mm higher, or larger, than its profile says" in words or "stands 1.5 mm higher" in words
 
 
 def test_track_without_a_part_in_view_falls_short_and_says_why(folder: Path) -> None:

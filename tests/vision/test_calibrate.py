@@ -171,13 +171,6 @@ def test_bad_marks_are_refused(marks: np.ndarray, change: float | None, wanted: 
         calibrate_plate.solve_plate(wrong, px[: len(marks)], CAMERA, "marks", TODAY)
 
 
-def test_height_of_a_tag_shows_in_its_size() -> None:
-    part = load_part("nut-m30")
-    px = model_of(CAMERA).project_plane(Pose2(4.0, 3.0, 1.0).apply(part.fiducial.corners_mm()), part.height_mm)
-    believed = part.model_copy(update={"height_mm": 20.0})
-    assert calibrate_plate.tag_height(CAMERA, believed, px) == pytest.approx(part.height_mm, abs=0.05)
-
-
 LENS = calibration.LensCalibration(
     made_on="2026-01-02", made_from="views", camera=CAMERA.name, width_px=1280, height_px=720, focal_px=(1048.0, 1049.0),
     principal_px=(640.0, 356.0), distortion=(0.07, -0.1, 0.0, 0.0, 0.0), rms_px=0.2, view_rms_px=(0.2, 0.2),

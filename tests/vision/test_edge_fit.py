@@ -201,3 +201,15 @@ def test_search_finds_the_tag_from_a_cell_and_a_half_away() -> None:
         found = cell_search.search(MODEL, pixels, (0, 0), TEMPLATE, PART.height_mm, start, 3.0, 0.21)
         assert math.hypot(found.x_mm - pose.x_mm, found.y_mm - pose.y_mm) < 0.4 * TEMPLATE.cell_mm
         assert abs(found.yaw_rad - pose.yaw_rad) < math.radians(4.0)
+
+
+@pytest.mark.parametrize("off_mm", [-0.6, 0.0, 0.8])
+def test_a_height_unlike_the_profile_s_shows_in_the_size_of_the_tag(off_mm: float) -> None:
+    pose = Pose2(3.0, -4.0, 0.5)
+    pixels = leaning_tag(MODEL.camera, PART, pose, 0.0, 0.0)
+    believed = PART.height_mm - off_mm
+    found = edge_fit.fit(MODEL, pixels, (0, 0), TEMPLATE, believed, pose)
+    assert isinstance(found, edge_fit.EdgeFit)
+    quality = edge_checks.judge(MODEL, pixels, (0, 0), TEMPLATE, believed, found)
+    assert quality.height_off_mm == pytest.approx(off_mm, abs=0.15)
+    assert 0.0 < quality.height_sd_mm < 0.3
