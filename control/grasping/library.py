@@ -22,8 +22,8 @@ from hw_profiles.geometry import Array, Pose2
 from hw_profiles.part import Part
 
 ANGLE_STEP_RAD = math.radians(15.0)
-N_GRASPS = 3  # kept for one part angle
-N_TRIED = 30
+N_GRASPS = 2  # kept for one part angle
+N_TRIED = 12
 NEW_SHARE = 0.15  # of the poses held so far that a further grasp must add
 PARK_PHASES_RAD = np.radians(np.arange(-90.0, 95.0, 5.0))
 PARK_OPENINGS_MM = (16.0, 14.0, 12.0, 10.0, 8.0, 6.0, 4.0, 3.0, 2.0)

@@ -17,7 +17,6 @@ from scipy.sparse import csr_array
 
 from control.grasping.hold import OPEN_MARGIN_MM, Bench
 from control.grasping.reach import PITCH, Node, Reach
-from control.model.kinematics import HandModel
 from hw_profiles.geometry import Array
 
 STEP_S = np.array([0.13, 0.13, 0.08])  # to carry the part by one cell
@@ -74,8 +73,7 @@ class Roadmap:
     def _hubs(self) -> tuple[NDArray[np.int64], NDArray[np.int64], int]:
         """Cells at which the fingers can change grasp, and the number of the hub of each.
 
-        A hub stands for a pose on the common lattice, angle modulo a turn, and for the side that the fingers wrap the part from: they
-        cannot pass from one side to the other around a part without opening the cage.
+        A hub stands for a pose on the common lattice, angle modulo a turn.
         """
         required = self._bench.demands.margin_mm > -math.inf
         keys, cells = [], []
@@ -84,8 +82,7 @@ class Roadmap:
             centres = reach.origin + PITCH * (np.argwhere(openable) + 0.5)
             index = np.floor(centres / PITCH).astype(np.int64)
             index[:, 2] %= N_YAW
-            side = wrap_side(reach, centres, self._bench.hand) if required else np.zeros(len(centres), dtype=np.int64)
-            keys.append(np.column_stack([index, side]))
+            keys.append(index)
             cells.append(numbered[openable])
         _, number = np.unique(np.concatenate(keys), axis=0, return_inverse=True)
         return np.concatenate(cells), number.ravel(), int(number.max(initial=-1)) + 1
@@ -144,15 +141,3 @@ def _shortest(
                     queue[tail], is_queued[other] = other, True
                     tail = (tail + 1) % (n + 1)
     return least
-
-
-def wrap_side(reach: Reach, rings: Array, hand: HandModel) -> NDArray[np.int64]:
-    """From which side the fingers wrap the part at ring poses (n, 3): +1 or −1, the sign of the contacts' mean phase.
-
-    The phase of a contact is its bearing about the part less the bearing of its finger's base.
-    """
-    points = reach.grasp.points_mm
-    bearings = np.arctan2(points[:, 1], points[:, 0])[None, :] + rings[:, 2:3]
-    offset = hand.base_mm[None, :, :] - rings[:, None, :2]
-    phases = np.angle(np.exp(1j * (bearings - np.arctan2(offset[..., 1], offset[..., 0]))))
-    return np.where(phases.mean(axis=1) < 0.0, -1, 1)

@@ -2,9 +2,9 @@
 
 from __future__ import annotations
 
-import itertools
 import math
 from dataclasses import dataclass
+from typing import NamedTuple
 
 import numpy as np
 
@@ -15,12 +15,32 @@ from control.model.kinematics import contact_centres, link_yaws
 from hw_profiles.geometry import Array, Pose2
 
 STEP_MM = 2.0  # between checked postures
-ORDERS = ((0.5, 0.4), (1.0, 0.0))  # the radius first, hugging the part; then both together
-STAND_OFFS_MM = (OPEN_MM, 5.0)  # tried in this order: the least opening that works
-ORDERS = ((0.5, 0.4), (1.0, 0.0))  # the radius first, hugging the part; then both together
 
-Way = tuple[float, tuple[float, float]]
-WAYS: tuple[Way, ...] = tuple(itertools.product(STAND_OFFS_MM, ORDERS))
+
+class Order(NamedTuple):
+    """In which order the fingers run about the part.
+
+    radius_by, bearing_from : by which share of a finger's way its radius is there, and from which share on its bearing changes.
+    turn : 0 for all fingers together; +1 or −1 for one after the other, as listed or from the last: then only one of them at a
+        time stands off as far as a corner of the part needs, and the gaps stay narrow.
+    """
+
+    radius_by: float
+    bearing_from: float
+    turn: int
+
+    def shares(self, s: float, n_fingers: int) -> tuple[Array, Array]:
+        """Shares of radius and bearing (n_fingers,) of each finger at a share s of the whole."""
+        own = np.full(n_fingers, s)
+        if self.turn:
+            rank = np.arange(n_fingers)[:: self.turn]
+            own = np.clip(s * n_fingers - rank, 0.0, 1.0)
+        return np.minimum(own / self.radius_by, 1.0), np.maximum(own - self.bearing_from, 0.0) / (1.0 - self.bearing_from)
+
+
+Way = tuple[float, Order]
+ORDERS = (Order(0.5, 0.4, 0), Order(1.0, 0.0, 0), Order(0.5, 0.0, 1), Order(0.5, 0.0, -1))
+WAYS: tuple[Way, ...] = ((OPEN_MM, ORDERS[0]), (OPEN_MM, ORDERS[2]), (OPEN_MM, ORDERS[3]), (OPEN_MM, ORDERS[1]), (5.0, ORDERS[0]))
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -128,13 +148,8 @@ def _shift(bench: Bench, grasp: Grasp, ring: Array, near: Array, clearances_mm: 
     return postures
 
 
-def _around(
-    bench: Bench, start: Array, end: Array, part_pose: Pose2, stand_off_mm: float, order: tuple[float, float]
-) -> list[Array] | None:
-    """Postures from `start` to `end`: each contact runs about the part, no nearer than the stand-off.
-
-    `order` says by which share of the way the radius is there and from which share on the bearing changes.
-    """
+def _around(bench: Bench, start: Array, end: Array, part_pose: Pose2, stand_off_mm: float, order: Order) -> list[Array] | None:
+    """Postures from `start` to `end`: each contact runs about the part, no nearer than the stand-off."""
     hand, pose = bench.hand, part_pose.as_array()
     hand_from_part_inverse = part_pose.inverse()
     begin = hand_from_part_inverse.apply(contact_centres(hand, start))
@@ -145,10 +160,11 @@ def _around(
     from_yaw, to_yaw = _last_link_yaws(bench, start), _last_link_yaws(bench, end)
     yaw_turn = np.where(hand.is_jaw, np.angle(np.exp(1j * (to_yaw - from_yaw))), np.nan)
     distance = np.abs(turn) * np.maximum(from_radius, to_radius) + np.abs(to_radius - from_radius)
+    length_mm = float(distance.max()) * (hand.n_fingers if order.turn else 1)
     postures: list[Array] = []
     near = start
-    for s in np.linspace(0.0, 1.0, max(1, math.ceil(float(distance.max()) / STEP_MM)) + 1)[1:]:
-        radius_share, bearing_share = min(s / order[0], 1.0), max(s - order[1], 0.0) / (1.0 - order[1])
+    for s in np.linspace(0.0, 1.0, max(1, math.ceil(length_mm / STEP_MM)) + 1)[1:]:
+        radius_share, bearing_share = order.shares(float(s), hand.n_fingers)
         bearing = from_bearing + bearing_share * turn
         rays = np.stack([np.cos(bearing), np.sin(bearing)], axis=1)
         radius = from_radius + radius_share * (to_radius - from_radius)

@@ -33,6 +33,7 @@ class Carry:
     ring : (3,) commanded hand_from_grasp: mm, mm, rad unwrapped.
     offset : (3,) part pose less ROLL · ring, as learnt; yaw unwrapped. first_offset : the same when the grasp closed.
     trail : (commanded_at_us, ring) of the recent past, oldest first.
+    heading : (3,) where the ring is on its way to when the goal's own is not straight ahead; None otherwise.
     """
 
     reach_index: int
@@ -40,6 +41,7 @@ class Carry:
     offset: Array
     first_offset: Array
     trail: tuple[tuple[int, Array], ...]
+    heading: Array | None = None
 
     @classmethod
     def begin(cls, reach_index: int, ring: Array, part: Array, now_us: int) -> Carry:

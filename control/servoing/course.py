@@ -37,21 +37,20 @@ def farthest_held(reach: Reach, start: Array, end: Array) -> Array:
     return last
 
 
-def next_ring(library: Library, carry: Carry, task: Task) -> tuple[Array, bool]:
-    """The ring pose (3,) to go to next toward the task's guide, and whether that is the guide's own.
+def direct_ring(library: Library, carry: Carry, task: Task) -> Array | None:
+    """The ring pose (3,) that brings the part to the task's guide, if this grasp can carry it straight there."""
+    wanted = carry.ring_for(task.guide)
+    return wanted if way_is_held(library.reaches[carry.reach_index], carry.ring, wanted) else None
 
-    Straight there if the grasp can carry the part all the way, or by one corner; else as near as this grasp brings it.
-    """
+
+def waypoint(library: Library, carry: Carry, task: Task) -> Array:
+    """Where to carry the part when the straight way is not held: round one corner, else as near as this grasp brings it."""
     reach = library.reaches[carry.reach_index]
     wanted = carry.ring_for(task.guide)
-    if way_is_held(reach, carry.ring, wanted):
-        return wanted, True
     for corner in (np.array([wanted[0], wanted[1], carry.ring[2]]), np.array([carry.ring[0], carry.ring[1], wanted[2]])):
         if way_is_held(reach, carry.ring, corner) and way_is_held(reach, corner, wanted):
-            return corner, False
-    if task.remaining is not None:
-        return _downhill(reach, carry, task.remaining), False
-    return _round_stroke(reach, carry, wanted), False
+            return corner
+    return _round_stroke(reach, carry, wanted) if task.remaining is None else _downhill(reach, carry, task.remaining)
 
 
 def _downhill(reach: Reach, carry: Carry, remaining: Remaining) -> Array:

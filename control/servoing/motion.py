@@ -114,15 +114,25 @@ def _taken_up(option: Option, sight: Sight, now_us: int) -> Carry:
 
 
 def _carry(controller: Controller, memory: Memory, carry: Carry, sight: Sight, elapsed_s: float) -> Memory:
-    library, task = controller.library, memory.task
-    wanted, is_final = carry.ring, True
+    task = memory.task
+    wanted: Array | None = carry.ring
     if task is not None and sight.lost_since_us is None:
-        wanted, is_final = course.next_ring(library, carry, task)
-        if not is_final and np.all(np.abs(wanted - carry.ring) < ARRIVED):
+        direct = course.direct_ring(controller.library, carry, task)
+        carry = replace(carry, heading=None) if direct is not None else _headed(controller, carry, task)
+        wanted = carry.heading if direct is None else direct
+        if direct is None and wanted is not None and np.all(np.abs(wanted - carry.ring) < ARRIVED):
             return _regrasp(controller, memory, carry, sight, task)
+    wanted = carry.ring if wanted is None else wanted
     ring = slewed(carry.ring, wanted, controller.tip_speed_mm_per_s, controller.turn_speed_rad_per_s, elapsed_s)
     posture = _blended(controller, memory, carry.reach_index, ring)
     return replace(posture, motion=carry.steer(ring, memory.now_us))
+
+
+def _headed(controller: Controller, carry: Carry, task: Task) -> Carry:
+    """With a heading: the one it has until it is there, then the next; a heading of here and now means that the stroke is over."""
+    if carry.heading is not None and np.any(np.abs(carry.heading - carry.ring) >= ARRIVED):
+        return carry
+    return replace(carry, heading=course.waypoint(controller.library, carry, task))
 
 
 def _regrasp(controller: Controller, memory: Memory, carry: Carry, sight: Sight, task: Task) -> Memory:
@@ -130,6 +140,7 @@ def _regrasp(controller: Controller, memory: Memory, carry: Carry, sight: Sight,
     since_us = next((at for at, ring in carry.trail if np.all(np.abs(ring - carry.ring) < ARRIVED)), memory.now_us)
     if memory.now_us - since_us < controller.limits.settle_s * 1e6:
         return replace(memory, motion=carry.steer(carry.ring, memory.now_us))
+    carry = replace(carry, heading=None)
     options = course.options_toward(controller.library, sight.measured, task, carry)
     return replace(memory, motion=Seek(options, carry))
 
