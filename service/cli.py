@@ -11,7 +11,7 @@ import typer
 from rich.console import Console
 
 from hw_profiles.errors import PalmloopError
-from service import commands_check, commands_serve, commands_trial, commands_vision
+from service import commands_check, commands_map, commands_serve, commands_trial, commands_vision
 
 FELL_SHORT, REFUSED = 1, 2
 
@@ -25,6 +25,7 @@ app = typer.Typer(
 app.command("check")(commands_check.check)
 app.command("trial")(commands_trial.trial)
 app.command("serve")(commands_serve.serve)
+app.command("map")(commands_map.map_layer)
 app.command("track")(commands_vision.track)
 app.add_typer(commands_vision.calibrate, name="calibrate")
 

@@ -91,7 +91,9 @@ def ranked_at(bench: Bench, part_yaw_rad: float) -> list[Grasp]:
 
 def _worth(bench: Bench, hold: Hold) -> float:
     """How good a hold is: closure, cage margin up to what is plenty, and room in the joints."""
-    margin = 1.0 if bench.demands.margin_mm == -math.inf else min(hold.margin_mm, PLENTY_MM) / PLENTY_MM
+    margin = min(max(hold.margin_mm, 0.0), PLENTY_MM) / PLENTY_MM
+    if bench.demands.margin_mm == -math.inf:  # preferred, not required
+        margin = 0.3 + 0.7 * margin
     return hold.closure * margin * (0.2 + _joint_room(bench.hand, hold.joints))
 
 
