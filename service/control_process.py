@@ -25,6 +25,7 @@ from service.devices.clock import MonotonicClock
 from service.devices.servo_port import SerialPort
 from service.loop import Loop
 from service.ports import Camera
+from service.rehearsal import rehearse
 from service.servo_link import FramedLink
 from service.shared import SharedBlock, frame_bytes
 from service.simulated.paced import PacedCamera, frame_shape
@@ -81,6 +82,7 @@ def run_control(wiring: Wiring) -> None:
 def _assemble(wiring: Wiring) -> Loop:
     rig, clock = wiring.rig, MonotonicClock()
     controller = Controller.of(rig)
+    rehearse(controller)
     camera: Camera = PacedCamera(rig, wiring.camera_block, wiring.frames)
     port = SerialPort(wiring.serial_device, rig.board.baud)
     return Loop(controller, camera, Tracker(rig.camera, rig.part), FramedLink(rig, port, clock), clock)

@@ -174,9 +174,8 @@ def link_yaws(model: HandModel, joints: Array) -> Array:
 
 def contact_centres(model: HandModel, joints: Array) -> Array:
     """Centre of each finger's contact (n_fingers, 2) [mm]: its tip, or the contact point on a jaw's centre line."""
-    lines = centre_lines(model, joints)
-    yaws = link_yaws(model, joints)[model.first[1:] - 1]
-    return np.asarray(lines[:, -1] - model.contact_back_mm[:, None] * np.stack([np.cos(yaws), np.sin(yaws)], axis=1))
+    centres: Array = _contact_centres(model.arrays, joints)
+    return centres
 
 
 def finger_jacobian(model: HandModel, finger: int, joints: Array, point_mm: Array) -> Array:
@@ -256,6 +255,20 @@ def centre_lines_kernel(hand: HandArrays, joints: Array) -> Array:
                 y += length * math.sin(yaw)
             lines[f, j + 1, 0], lines[f, j + 1, 1] = x, y
     return lines
+
+
+@njit(cache=True)
+def _contact_centres(hand: HandArrays, joints: Array) -> Array:
+    lines = centre_lines_kernel(hand, joints)
+    centres = np.empty((lines.shape[0], 2))
+    for f in range(lines.shape[0]):
+        yaw = hand.base_yaw_rad[f]
+        for k in range(hand.first[f], hand.first[f + 1]):
+            yaw += 0.0 if hand.is_slide[k] else joints[k]
+        back = hand.contact_back_mm[f]
+        centres[f, 0] = lines[f, MAX_LINKS, 0] - back * math.cos(yaw)
+        centres[f, 1] = lines[f, MAX_LINKS, 1] - back * math.sin(yaw)
+    return centres
 
 
 @njit(cache=True)
