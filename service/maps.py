@@ -262,7 +262,7 @@ def _held(library: Library, grid: PoseGrid) -> Flags:
     """Which poses of a grid some grasp holds, bool (n_x, n_y, n_yaw)."""
     held = np.zeros(grid.shape, dtype=bool)
     for reach in library.reaches:
-        cells = reach.held_cells()
+        cells = reach.held
         i, j = (np.floor((ticks - reach.origin[axis]) / PITCH[axis]).astype(int) for axis, ticks in enumerate((grid.x_mm, grid.y_mm)))
         x_ok, y_ok = (i >= 0) & (i < cells.shape[0]), (j >= 0) & (j < cells.shape[1])
         planes: Flags = cells[i[x_ok]][:, j[y_ok]]

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import lru_cache
 from itertools import product
 
@@ -47,7 +47,7 @@ class Library:
     Attributes
     ----------
     reaches : one for each part angle of a 15° grid that has a grasp; one alone for a disc.
-    roadmap : how to get from one pose to another over all reaches; None for a disc, which any grasp may take up at any angle.
+    roadmap : how to get from one pose to another over all reaches; None without any.
     park : joints (n_joints,) of the loose cage that a run starts from; the part may lie anywhere inside.
     is_round : the part looks the same at every angle, so a grasp may take it up at any.
     """
@@ -65,8 +65,11 @@ class Library:
         bench = Bench.of(hand, part, margin_mm)
         park = park_posture(bench)
         reaches = _reaches_over(bench, park, 2.0 * math.pi / part.n_fold) if part.n_fold else _reaches_at(bench, park, 0.0, 1)
-        roadmap = Roadmap(tuple(reaches), bench) if reaches and part.n_fold else None
-        return cls(bench, tuple(reaches), roadmap, park, part.n_fold == 0, loose_mm)
+        if not reaches:
+            return cls(bench, (), None, park, part.n_fold == 0, loose_mm)
+        kept = Roadmap(tuple(reaches), bench).connected()
+        connected = tuple(replace(reach, held=held) for reach, held in zip(reaches, kept, strict=True))
+        return cls(bench, connected, Roadmap(connected, bench), park, part.n_fold == 0, loose_mm)
 
     def options(self, pose: Pose2) -> list[Option]:
         """Every way to take the part up at a pose, best cage margin first."""
@@ -92,11 +95,9 @@ class Library:
         """Whether any grasp can hold the part at a position, at whatever angle."""
         for reach in self.reaches:
             i, j, _ = reach.cell(np.array([x_mm, y_mm, reach.origin[2]]))
-            n_x, n_y, _ = reach.margin_mm.shape
-            if 0 <= i < n_x - 1 and 0 <= j < n_y - 1:
-                held = reach.margin_mm[i : i + 2, j : j + 2].min(axis=(0, 1)) > -np.inf
-                if (held[:-1] & held[1:]).any():
-                    return True
+            n_x, n_y, _ = reach.held.shape
+            if 0 <= i < n_x and 0 <= j < n_y and reach.held[i, j].any():
+                return True
         return False
 
     def nearest(self, pose: Pose2, angle_matters: bool) -> Pose2 | None:
@@ -131,7 +132,9 @@ def _reaches_over(bench: Bench, park: Array, period_rad: float) -> list[Reach]:
     reaches: list[Reach] = []
     for k in range(round(2.0 * math.pi / period_rad)):
         turn = np.array([0.0, 0.0, k * period_rad])
-        reaches.extend(Reach(r.grasp.turned(-k * period_rad), r.origin + turn, r.margin_mm, r.open_margin_mm, r.joints) for r in first)
+        reaches.extend(
+            Reach(r.grasp.turned(-k * period_rad), r.origin + turn, r.margin_mm, r.open_margin_mm, r.joints, r.held) for r in first
+        )
     return reaches
 
 
@@ -148,7 +151,7 @@ def _reaches_at(bench: Bench, park: Array, yaw_rad: float, n: int) -> list[Reach
         if not any(transfer(bench, park, None, (grasp, centre), pose, 1.0, Speeds(), way) for way in WAYS):
             continue
         reach = flood(bench, grasp, centre)
-        held = reach.held_cells()
+        held = reach.held
         if covered is not None and np.count_nonzero(held & ~covered) < NEW_SHARE * np.count_nonzero(covered):
             continue
         covered = held if covered is None else covered | held
@@ -165,7 +168,7 @@ def _cached_primitives(library: Library, reach_index: int, cell: Node) -> Primit
 
 def _cells(reach: Reach) -> Array:
     """Centres (k, 3) of the cells that can be held."""
-    return np.asarray(reach.origin + PITCH * (np.argwhere(reach.held_cells()) + 0.5))
+    return np.asarray(reach.origin + PITCH * (np.argwhere(reach.held) + 0.5))
 
 
 def park_posture(bench: Bench) -> Array:

@@ -5,7 +5,6 @@ from __future__ import annotations
 import itertools
 import math
 from dataclasses import dataclass
-from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
@@ -31,6 +30,8 @@ class Reach:
     margin_mm : (n_x, n_y, n_yaw) cage margin at each node; −inf where the grasp cannot hold.
     open_margin_mm : the same with the fingers opened a little, as a change of grasp needs it.
     joints : (n_x, n_y, n_yaw, n_joints) of the touching grasp there; nan where it cannot hold.
+    held : (n_x − 1, n_y − 1, n_yaw − 1) cells that the grasp may be used in: every corner can be held, and the rest of what the hand
+        can do with the part is connected to it.
     """
 
     grasp: Grasp
@@ -38,49 +39,41 @@ class Reach:
     margin_mm: Array
     open_margin_mm: Array
     joints: Array
+    held: NDArray[np.bool_]
 
     def cell(self, pose: Array) -> Node:
         """Lattice cell that holds a pose (3,) with unwrapped yaw."""
         return tuple(int(k) for k in np.floor((pose - self.origin) / PITCH + 1e-9))  # type: ignore[return-value]
 
     def cell_margin_mm(self, pose: Array) -> float:
-        """Least cage margin over the corners of the cell that holds a pose (3,); −inf where a corner cannot be held."""
-        i, j, k = self.cell(pose)
-        n_x, n_y, n_yaw = self.margin_mm.shape
-        if not (0 <= i < n_x - 1 and 0 <= j < n_y - 1 and 0 <= k < n_yaw - 1):
+        """Least cage margin over the corners of the cell around a pose (3,); −inf where it cannot be held."""
+        if not self.holds(pose):
             return -math.inf
+        i, j, k = self.cell(pose)
         return float(self.margin_mm[i : i + 2, j : j + 2, k : k + 2].min())
 
-    def held_cells(self) -> NDArray[np.bool_]:
-        """Which cells can be held (n_x − 1, n_y − 1, n_yaw − 1)."""
-        return _least_over_corners(self.margin_mm) > -np.inf
-
-    def openable_cells(self, margin_mm: float) -> NDArray[np.bool_]:
+    def openable(self, margin_mm: float) -> NDArray[np.bool_]:
         """Which cells can be held, and let go of with a cage margin left (n_x − 1, n_y − 1, n_yaw − 1)."""
-        return self.held_cells() & (_least_over_corners(self.open_margin_mm) >= margin_mm)
+        return self.held & (_least_over_corners(self.open_margin_mm) >= margin_mm)
 
     def holds(self, pose: Array) -> bool:
-        """Whether the whole cell around a pose (3,) can be held."""
-        return self.cell_margin_mm(pose) > -math.inf
+        """Whether the cell around a pose (3,) can be held."""
+        return self.holds_all(pose[None, :])
 
     def holds_all(self, poses: Array) -> bool:
         """Whether the cells around all poses (n, 3) can be held."""
         index = np.floor((poses - self.origin) / PITCH + 1e-9).astype(np.int64)
-        held = self._held
+        held = self.held
         if (index < 0).any() or (index >= held.shape).any():
             return False
         return bool(held[index[:, 0], index[:, 1], index[:, 2]].all())
-
-    @cached_property
-    def _held(self) -> NDArray[np.bool_]:
-        return self.held_cells()
 
     def held_cell_near(self, pose: Array) -> Node:
         """The cell that holds a pose (3,), or the nearest one around it that can be held."""
         cell = np.array(self.cell(pose))
         around = cell + np.array(list(itertools.product((0, -1, 1), repeat=3)))
-        inside = around[((around >= 0) & (around < self._held.shape)).all(axis=1)]
-        held = inside[self._held[inside[:, 0], inside[:, 1], inside[:, 2]]]
+        inside = around[((around >= 0) & (around < self.held.shape)).all(axis=1)]
+        held = inside[self.held[inside[:, 0], inside[:, 1], inside[:, 2]]]
         if not len(held):
             return (int(cell[0]), int(cell[1]), int(cell[2]))
         place = (pose - self.origin) / PITCH - 0.5
@@ -95,11 +88,11 @@ class Reach:
     def yaw_span(self, x_mm: float, y_mm: float, yaw_rad: float) -> tuple[float, float]:
         """Least and greatest yaw that can be held at (x, y) without leaving, starting from `yaw_rad` (which must be held)."""
         i, j, k = self.cell(np.array([x_mm, y_mm, yaw_rad]))
-        held = self.margin_mm[i : i + 2, j : j + 2].min(axis=(0, 1)) > -np.inf
+        held = self.held[i, j]
         low, high = k, k + 1
         while low > 0 and held[low - 1]:
             low -= 1
-        while high < len(held) - 1 and held[high + 1]:
+        while high < len(held) and held[high]:
             high += 1
         return float(self.origin[2] + low * PITCH[2]), float(self.origin[2] + high * PITCH[2])
 
@@ -135,6 +128,7 @@ def flood(bench: Bench, grasp: Grasp, start: Array) -> Reach:
         open_margins,
         joints,
     )
-    for array in (origin, margins, open_margins, joints):
+    held = _least_over_corners(margins) > -np.inf
+    for array in (origin, margins, open_margins, joints, held):
         array.setflags(write=False)
-    return Reach(grasp, origin, margins, open_margins, joints)
+    return Reach(grasp, origin, margins, open_margins, joints, held)

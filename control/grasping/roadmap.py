@@ -14,6 +14,7 @@ import numpy as np
 from numba import njit
 from numpy.typing import NDArray
 from scipy.sparse import csr_array
+from scipy.sparse.csgraph import connected_components
 
 from control.grasping.hold import OPEN_MARGIN_MM, Bench
 from control.grasping.reach import PITCH, Node, Reach
@@ -43,7 +44,7 @@ class Roadmap:
 
     def __init__(self, reaches: tuple[Reach, ...], bench: Bench) -> None:
         self.reaches, self._bench = reaches, bench
-        self._held = [reach.held_cells() for reach in reaches]
+        self._held = [reach.held for reach in reaches]
         ids: list[NDArray[np.int64]] = []
         n_cells = 0
         for held in self._held:
@@ -78,14 +79,21 @@ class Roadmap:
         required = self._bench.demands.margin_mm > -math.inf
         keys, cells = [], []
         for reach, numbered in zip(self.reaches, self._ids, strict=True):
-            openable = reach.openable_cells(OPEN_MARGIN_MM if required else -math.inf)
+            openable = reach.openable(OPEN_MARGIN_MM if required else -math.inf)
             centres = reach.origin + PITCH * (np.argwhere(openable) + 0.5)
             index = np.floor(centres / PITCH).astype(np.int64)
-            index[:, 2] %= N_YAW
+            index[:, 2] = index[:, 2] % N_YAW if self._bench.part.n_fold else 0  # a disc may be taken up at any angle
             keys.append(index)
             cells.append(numbered[openable])
         _, number = np.unique(np.concatenate(keys), axis=0, return_inverse=True)
         return np.concatenate(cells), number.ravel(), int(number.max(initial=-1)) + 1
+
+    def connected(self) -> list[NDArray[np.bool_]]:
+        """For each reach the cells of the largest set that can be got from one to another."""
+        _, labels = connected_components(self._graph, directed=False)
+        largest = np.bincount(labels[: self._n_cells]).argmax()
+        is_in = np.append(labels[: self._n_cells] == largest, False)
+        return [is_in[numbered] for numbered in self._ids]
 
     def remaining(self, goal: Array, blocked: frozenset[int] = frozenset()) -> Remaining:
         """Seconds to a goal pose (3,) from every cell; a yaw of nan stands for any angle.

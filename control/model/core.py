@@ -48,8 +48,10 @@ class ConvexCore:
 def incircle(convex_mm: Array) -> tuple[Array, float]:
     """Centre (2,) and radius [mm] of the largest circle inside a convex polygon (m, 2): the Chebyshev centre, a linear programme."""
     edges = np.roll(convex_mm, -1, axis=0) - convex_mm
-    normals = np.stack([edges[:, 1], -edges[:, 0]], axis=1) / np.linalg.norm(edges, axis=1)[:, None]
-    offsets = (normals * convex_mm).sum(axis=1)
+    lengths = np.linalg.norm(edges, axis=1)
+    is_edge = lengths > 1e-9
+    normals = np.stack([edges[:, 1], -edges[:, 0]], axis=1)[is_edge] / lengths[is_edge, None]
+    offsets = (normals * convex_mm[is_edge]).sum(axis=1)
     constraints = np.concatenate([normals, np.ones((len(normals), 1))], axis=1)
     found = linprog([0.0, 0.0, -1.0], A_ub=constraints, b_ub=offsets, bounds=[(None, None), (None, None), (0.0, None)])
     return np.asarray(found.x[:2]), float(found.x[2])

@@ -34,7 +34,7 @@ class Escape:
     Attributes
     ----------
     pass_mj : highest energy on the route; inf when no route leads out.
-    start_mj : energy at the part's own pose; pass_mj − start_mj is what a disturbance must bring.
+    start_mj : energy at the part's own pose; pass_mj − start_mj is what a disturbance must bring. Both count the work of a steady pull.
     route : (k, 3) poses from the part outward: mm, mm, rad. energies_mj : (k,) along it.
     pass_pose : where the route is highest; None without a route.
     fingers_apart_mm : least distance between two yielding fingers on the route. Below 0 they would have to pass through each other, which
@@ -54,15 +54,16 @@ class Escape:
         return self.fingers_apart_mm < 0.0
 
 
-def escape(energy: Energy, command: Array, pose: Pose2, n: int = 48, n_yaw: int = 36) -> Escape:
+def escape(energy: Energy, command: Array, pose: Pose2, n: int = 48, n_yaw: int = 36, pull_n: tuple[float, float] = (0.0, 0.0)) -> Escape:
     """The lowest pass from `pose` to outside the hand's fingers at a command (n_joints,).
 
     Parameters
     ----------
+    pull_n : a steady force on the part [N], such as its weight on a tilted bench; its work counts too.
     n, n_yaw : cells along x and y of a box that holds the hand, and over one period of the part's symmetry (a disc needs one).
     """
     hand, part = energy.hand, energy.part
-    command = energy.checked(command)
+    command, pull = energy.checked(command), np.array(pull_n, dtype=float)
     lines = centre_lines_kernel(hand.arrays, command)
     hull = geometry.convex_hull(lines.reshape(-1, 2))
     beyond_mm = float(max(hand.link_radius_mm.max(), hand.tip_radius_mm.max())) + part.circumradius_mm
@@ -73,16 +74,16 @@ def escape(energy: Energy, command: Array, pose: Pose2, n: int = 48, n_yaw: int 
     origin = pose.as_array() - cell * (np.array(size) // 2)
     came_from = np.full(size, -1, np.int64)
     end = minimax_kernel(
-        hand.arrays, energy.springs, command, energy.pieces, part.circumradius_mm, origin, cell, hull, beyond_mm, came_from
+        hand.arrays, energy.springs, command, energy.pieces, part.circumradius_mm, pull, origin, cell, hull, beyond_mm, came_from
     )
-    start_mj = energy.at(command, pose).energy_mj
+    start_mj = energy.at(command, pose).energy_mj - float(pull @ pose.xy_mm)
     if end < 0:
         return Escape(math.inf, start_mj, np.zeros((0, 3)), np.zeros(0), None, math.inf)
-    route = _straightened(energy, command, _route(int(end), came_from, origin, cell), cell)
-    return _measured(energy, command, start_mj, route)
+    route = _straightened(energy, command, pull, _route(int(end), came_from, origin, cell), cell)
+    return _measured(energy, command, pull, start_mj, route)
 
 
-def _straightened(energy: Energy, command: Array, route: Array, cell: Array) -> Array:
+def _straightened(energy: Energy, command: Array, pull: Array, route: Array, cell: Array) -> Array:
     """The same way with its steps drawn straight wherever that costs no more than the route's highest point, in poses half a cell apart."""
 
     def along(a: Array, b: Array) -> Array:
@@ -91,7 +92,7 @@ def _straightened(energy: Energy, command: Array, route: Array, cell: Array) -> 
         return np.linspace(a, b, n + 1)
 
     def highest(poses: Array) -> float:
-        return max(energy.at(command, Pose2.from_array(pose)).energy_mj for pose in poses)
+        return max(energy.at(command, Pose2.from_array(pose)).energy_mj - float(pull @ pose[:2]) for pose in poses)
 
     level, here, kept = highest(route), 0, [route[:1]]
     while here < len(route) - 1:
@@ -117,9 +118,9 @@ def _route(end: int, came_from: NDArray[np.int64], origin: Array, cell: Array) -
     return np.stack([np.interp(finer, along, column) for column in poses.T], axis=1)
 
 
-def _measured(energy: Energy, command: Array, start_mj: float, route: Array) -> Escape:
+def _measured(energy: Energy, command: Array, pull: Array, start_mj: float, route: Array) -> Escape:
     found = [energy.at(command, Pose2.from_array(pose)) for pose in route]
-    energies = np.array([one.energy_mj for one in found])
+    energies = np.array([one.energy_mj for one in found]) - route[:, :2] @ pull
     hand = energy.hand.arrays
     apart = min(float(fingers_apart(hand, centre_lines_kernel(hand, one.joints))) for one in found)
     highest = int(np.argmax(energies))
@@ -135,6 +136,7 @@ def minimax_kernel(
     command: Array,
     pieces: Pieces,
     reach_mm: float,
+    pull: Array,
     origin: Array,
     cell: Array,
     hull_mm: Array,
@@ -147,7 +149,7 @@ def minimax_kernel(
     lowest, is_done = np.full(came_from.shape, np.inf), np.zeros(came_from.shape, np.bool_)
     first = ((n_x // 2) * n_y + n_y // 2) * n_yaw + n_yaw // 2
     came_from[n_x // 2, n_y // 2, n_yaw // 2] = first
-    heap = [(0.0, 0, first)]  # the pass so far, steps so far (the shortest of equal routes), cell
+    heap = [(-np.inf, 0, first)]  # the pass so far, steps so far (the shortest of equal routes), cell
     while len(heap) > 0:
         level, steps, here = heapq.heappop(heap)
         i, j, k = here // (n_y * n_yaw), (here // n_yaw) % n_y, here % n_yaw
@@ -165,7 +167,8 @@ def minimax_kernel(
             for share in (0.5, 1.0):
                 pose[0], pose[1] = origin[0] + (i + share * di) * cell[0], origin[1] + (j + share * dj) * cell[1]
                 pose[2] = origin[2] + (k + share * dk) * cell[2]
-                height = max(height, energy_at(hand, springs, command, pose, pieces, reach_mm, joints))
+                here_mj = energy_at(hand, springs, command, pose, pieces, reach_mm, joints)
+                height = max(height, here_mj - pull[0] * pose[0] - pull[1] * pose[1])
             if height < lowest[u, v, w]:
                 lowest[u, v, w], came_from[u, v, w] = height, here
                 heapq.heappush(heap, (height, steps + 1, (u * n_y + v) * n_yaw + w))

@@ -54,17 +54,26 @@ class FreeSpace:
     room: NDArray[np.bool_]
 
 
-def free_space(hand: HandModel, part: Part, joints: Array, pose: Pose2, n: int = 64, n_yaw: int = 48) -> FreeSpace:
+def free_space(hand: HandModel, part: Part, joints: Array, pose: Pose2, n: int = 64, n_yaw: int = 48, n_finer: int = 1) -> FreeSpace:
     """Whether a part at `pose` can leave the hand at a posture (n_joints,) whose fingers stand still.
 
     Parameters
     ----------
     n, n_yaw : cells along x and y, and over one period of the part's symmetry (a disc needs one).
+    n_finer : how often to ask again with twice the cells each way when the answer is undecided.
 
     Notes
     -----
-    Boxes about the part grow until one shows a cage or holds the hand. Cost: milliseconds for a tight cage, some 0.1 s for a whole grid.
+    Boxes about the part grow until one shows a cage or holds the hand. Cost: milliseconds for a tight cage, some 0.1 s for a whole grid,
+    eight times as much for the next finer one.
     """
+    found = _ask(hand, part, joints, pose, n, n_yaw)
+    if found.verdict is Verdict.UNDECIDED and n_finer > 0:
+        return free_space(hand, part, joints, pose, 2 * n, 2 * n_yaw, n_finer - 1)
+    return found
+
+
+def _ask(hand: HandModel, part: Part, joints: Array, pose: Pose2, n: int, n_yaw: int) -> FreeSpace:
     shape, period = PartShape.of(part), 0.0 if isinstance(part.shape, Disc) else 2.0 * math.pi / part.n_fold
     n_yaw = n_yaw if period else 1
     lines = centre_lines_kernel(hand.arrays, joints)

@@ -17,6 +17,7 @@ from hw_profiles.geometry import Array, Pose2
 SAMPLES_PER_CELL = 6  # on a straight way through a reach
 N_STEPS = 96  # of the search for its end
 CENTRE_MM = 10.0  # strokes of a long turn are made this near to the palm centre
+TURNED_RAD = math.radians(8.0)
 WORTH_S = 0.3  # a regrasp must bring the goal nearer by this beyond its own cost
 
 
@@ -90,11 +91,7 @@ def options_toward(library: Library, part: Array, task: Task, held: Carry | None
     options = library.options(Pose2(float(part[0]), float(part[1]), math.remainder(float(part[2]), 2.0 * math.pi)))
     if task.remaining is not None:
         return _nearest_first(library, options, task.remaining, held)
-    ranked = []
-    for option in options:
-        if held is not None and option.reach_index == held.reach_index and np.abs(option.ring - held.ring).max() < math.radians(8.0):
-            continue
-        ranked.append((_promise(library, option, part, task.guide), option))
+    ranked = [(_promise(library, option, part, task.guide), option) for option in options if _is_another(option, held)]
     ranked.sort(key=lambda pair: -pair[0])
     return tuple(option for _, option in ranked)
 
@@ -104,9 +101,14 @@ def _nearest_first(library: Library, options: list[Option], remaining: Remaining
     if held is not None:
         limit = remaining.at(held.reach_index, library.reaches[held.reach_index].cell(held.ring)) - WORTH_S
     timed = [(remaining.at(o.reach_index, library.reaches[o.reach_index].cell(o.ring)) - 0.02 * min(o.margin_mm, 5.0), o) for o in options]
-    timed = [(seconds, o) for seconds, o in timed if seconds < limit and (held is None or o.reach_index != held.reach_index)]
+    timed = [(seconds, o) for seconds, o in timed if seconds < limit and _is_another(o, held)]
     timed.sort(key=lambda pair: pair[0])
     return tuple(option for _, option in timed)
+
+
+def _is_another(option: Option, held: Carry | None) -> bool:
+    """Whether an option differs from the grasp that is held: another one, or the same well turned."""
+    return held is None or option.reach_index != held.reach_index or bool(np.abs(option.ring - held.ring).max() >= TURNED_RAD)
 
 
 def _promise(library: Library, option: Option, part: Array, guide: Array) -> float:

@@ -133,7 +133,7 @@ def _begin(controller: Controller, memory: Memory, goal: Goal, notes: Notes) -> 
     if unreachable is not None:  # what is under way goes on
         notes.outcomes.append(unreachable)
         return memory
-    if controller.library.roadmap is not None:
+    if controller.library.roadmap is not None and (not controller.library.is_round or goal.kind is Kind.POSITION):
         task = replace(task, remaining=controller.library.roadmap.remaining(task.guide))
     memory = _end(memory, Ending.CANCELLED, f"replaced by goal {goal.id}", notes)
     return replace(memory, state=state, why=f"working on goal {goal.id}", task=task, motion=motion.woken(memory.motion))

@@ -66,5 +66,5 @@ def _drawn_pose(library: Library, rng: np.random.Generator) -> Pose2:
 
 
 def _held_cells(library: Library) -> tuple[Array, tuple[Reach, ...]]:
-    corners = [reach.origin + PITCH * np.argwhere(reach.held_cells()) for reach in library.reaches]
+    corners = [reach.origin + PITCH * np.argwhere(reach.held) for reach in library.reaches]
     return np.concatenate(corners), library.reaches
