@@ -1,12 +1,25 @@
-"""Child processes that never outlive their parent."""
+"""Child processes that never outlive their parent, and import no more than they need."""
 
 from __future__ import annotations
 
 import ctypes
 import os
 import signal
+import sys
+from multiprocessing.process import BaseProcess
 
 PR_SET_PDEATHSIG = 1  # linux/prctl.h
+
+
+def start_lean(process: BaseProcess) -> None:
+    """Start a spawned process without its importing the command that started us: the web and the plots stay out of it."""
+    main = sys.modules["__main__"]
+    hidden = {name: main.__dict__.pop(name, None) for name in ("__file__", "__spec__")}
+    main.__spec__ = None
+    try:
+        process.start()
+    finally:
+        main.__dict__.update({name: value for name, value in hidden.items() if value is not None})
 
 
 def die_with_parent() -> None:

@@ -6,11 +6,11 @@ import numpy as np
 
 from control.servoing.controller import Controller
 from control.servoing.memory import Memory
-from hw_profiles.geometry import Pose2
 from hw_profiles.rig import Rig
 from service.loop import Loop
 from service.servo_link import FramedLink
 from service.simulated.bench import LockstepBench
+from service.simulated.dropped import drawn_start
 from service.simulated.variation import Variation
 from service.trials.run import Stage
 from vision.tracker import Tracker
@@ -28,14 +28,3 @@ def simulated_stage(rig: Rig, variation: Variation, seed: int) -> Stage:
         loop.memory = Memory(now_us=bench.clock.now_us())
 
     return Stage(loop, bench.truth, lambda: bench.world.has_escaped, restart)
-
-
-def drawn_start(controller: Controller, rng: np.random.Generator) -> Pose2:
-    """A pose inside the loose cage that no finger touches: as if somebody had dropped the part in."""
-    bench, park = controller.library.bench, controller.library.park
-    for spread_mm in np.linspace(8.0, 0.0, 200):
-        x_mm, y_mm = rng.uniform(-spread_mm, spread_mm, size=2)
-        pose = Pose2(float(x_mm), float(y_mm), float(rng.uniform(-np.pi, np.pi)))
-        if bench.clearances.to_part(park, pose).min() > 0.5:
-            return pose
-    return Pose2(0.0, 0.0, 0.0)

@@ -38,6 +38,16 @@ class SharedBlock:
         self._buffer[HEADER.size : HEADER.size + len(data)] = data
         HEADER.pack_into(self._buffer, 0, version + 2, len(data), stamp)
 
+    def version(self) -> int:
+        """Even, and grows with every write; 0 before the first. Tells cheaply whether a read would bring something new."""
+        version: int = HEADER.unpack_from(self._buffer, 0)[0]
+        return version - version % 2
+
+    def stamp(self) -> int:
+        """Of the newest write; costs next to nothing."""
+        stamp: int = HEADER.unpack_from(self._buffer, 0)[2]
+        return stamp
+
     def read(self) -> tuple[int, int, bytes] | None:
         """Version, stamp and a copy of the value; None before the first, or while a writer is too busy."""
         for _ in range(100):
