@@ -75,7 +75,8 @@ class Reach:
         inside = around[((around >= 0) & (around < self.held.shape)).all(axis=1)]
         held = inside[self.held[inside[:, 0], inside[:, 1], inside[:, 2]]]
         if not len(held):
-            return (int(cell[0]), int(cell[1]), int(cell[2]))
+            i, j, k = np.clip(cell, 0, np.array(self.held.shape) - 1)
+            return int(i), int(j), int(k)
         place = (pose - self.origin) / PITCH - 0.5
         i, j, k = held[int(np.argmin(np.abs(held - place).max(axis=1)))]
         return int(i), int(j), int(k)
