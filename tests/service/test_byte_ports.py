@@ -88,6 +88,11 @@ def test_bytes_come_in_and_are_given_once(line: Line) -> None:
     assert line.port.read() == b""
 
 
+def _read_until(port: BytePort, deadline_s: float) -> None:
+    while time.monotonic() < deadline_s:
+        port.read()
+
+
 def test_missing_device_is_refused_by_name() -> None:
     with pytest.raises(DeviceError, match=r"serial device /dev/none-such: no such file or directory"):
         SerialPort("/dev/none-such", 115200)
@@ -102,8 +107,7 @@ def test_pulled_cable_raises_and_names_the_device() -> None:
     os.close(slave)
     deadline_s = time.monotonic() + 5.0
     with pytest.raises(DeviceError, match=name):
-        while time.monotonic() < deadline_s:
-            port.read()
+        _read_until(port, deadline_s)
     port.close()
 
 
