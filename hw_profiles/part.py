@@ -145,8 +145,7 @@ class Part(Profile):
         if bitten or not geometry.contains(outline, points).all():
             size = f"size_mm {tag.size_mm:g}" if isinstance(tag, Fiducial) else f"spacing_mm {tag.spacing_mm:g}"
             raise refuse(
-                f"fiducial.{size} at ({tag.x_mm:g}, {tag.y_mm:g}) reaches past the part's outline; "
-                "allowed: a tag that lies on the part"
+                f"fiducial.{size} at ({tag.x_mm:g}, {tag.y_mm:g}) reaches past the part's outline; allowed: a tag that lies on the part"
             )
         return self
 
