@@ -41,12 +41,8 @@ class Chromium:
     def page(self, url: str, width: int = 1440, height: int = 900) -> Page:
         """A new tab at an address."""
         with urlopen(f"http://127.0.0.1:{self.port}/json/list") as reply:
-            known = {target["id"] for target in json.load(reply)}
-        first = self._pages[0] if self._pages else None
-        if first is None:
-            target = next(iter(known))
-        else:
-            target = first.send("Target.createTarget", url="about:blank")["targetId"]
+            known = next(target["id"] for target in json.load(reply) if target["type"] == "page")
+        target = self._pages[0].send("Target.createTarget", url="about:blank")["targetId"] if self._pages else known
         page = Page(f"ws://127.0.0.1:{self.port}/devtools/page/{target}", width, height)
         self._pages.append(page)
         page.go(url)
