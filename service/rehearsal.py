@@ -21,7 +21,12 @@ N_TICKS = 150
 def rehearse(controller: Controller) -> None:
     """Arm, grasp and carry a part that never moves; nothing leaves this function."""
     lying, memory = Pose2(0.0, 0.0, 0.1), Memory()
-    goals: dict[int, Request] = {1: Arm(), 3: _goal("far", Kind.POSE, 15.0, 1.0), 100: _goal("turned", Kind.ANGLE, 0.0, 2.5)}
+    goals: dict[int, Request] = {
+        1: Arm(),
+        3: _goal("far", Kind.POSE, 15.0, 1.0),
+        80: _goal("aside", Kind.POSITION, -15.0, 0.0),
+        110: _goal("turned", Kind.ANGLE, 0.0, 2.5),
+    }
     for count in range(1, N_TICKS):
         now_us = count * PERIOD_US
         sight = PartPose(lying, lying, np.zeros(3), np.eye(3))
